@@ -1,0 +1,5 @@
+"""``python -m shaper`` is the command ``shaper``."""
+
+from shaper.cli import main
+
+raise SystemExit(main())

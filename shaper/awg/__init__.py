@@ -1,0 +1,1 @@
+"""Into the memory of an arbitrary waveform generator."""

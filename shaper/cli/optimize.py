@@ -1,0 +1,13 @@
+"""``shaper optimize``."""
+
+from __future__ import annotations
+
+
+def add(commands):
+    """Declare the command's arguments."""
+    return commands.add_parser("optimize")
+
+
+def run(args) -> int:
+    """Run it; returns the exit code."""
+    raise SystemExit(2)

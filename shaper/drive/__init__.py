@@ -1,0 +1,1 @@
+"""What stands between the numbers and the qubit: bound, sample clock, codes, line."""

@@ -1,0 +1,1 @@
+"""What a waveform is worth, and how one can know."""

@@ -1,0 +1,1 @@
+"""What the drive does to the qubit."""
