@@ -1,1 +1,1 @@
-"""Into the memory of an arbitrary waveform generator."""
+"""Into the memory of an arbitrary waveform generator, by open standards and without surprises."""
