@@ -1,0 +1,174 @@
+"""The tables that figures are drawn from and that ``--json`` prints: plain dicts of arrays.
+
+Unit in each key, as in every file for people. What has no value (the phase of silence) is nan
+here and null in JSON.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+
+import numpy as np
+
+from shaper.physics.propagate import propagate
+from shaper.pulse import Pulse
+from shaper.rotation import bloch_matrix, product
+from shaper.target import Target, infidelity
+from shaper.units import DEG, MHZ, NS
+
+_TURN_PER_POINT = math.radians(3)  # largest turn between two points of a drawn path
+
+
+def waveform_table(pulse: Pulse) -> dict:
+    """What the DAC holds, in runs of equal codes.
+
+    Returns:
+        ``edge_ns`` [run + 1]; ``drive_x_MHz``, ``drive_y_MHz``, ``amplitude_MHz``, ``phase_deg``
+        [run], the phase in (-180, 180] and nan where the drive is silent; ``full_scale_MHz``.
+    """
+    drive, durations = pulse.played
+    x, y = (drive / MHZ).T
+    amplitude = np.hypot(x, y)
+    phase = np.where(amplitude > 0, np.arctan2(y, x) / DEG, np.nan)
+    return {
+        "edge_ns": np.concatenate([[0.0], np.cumsum(durations)]) / NS,
+        "drive_x_MHz": x,
+        "drive_y_MHz": y,
+        "amplitude_MHz": amplitude,
+        "phase_deg": phase,
+        "full_scale_MHz": pulse.full_scale / MHZ,
+    }
+
+
+def cut_table(
+    pulses: Mapping[str, Pulse],
+    target: Target,
+    amplitude_error: Sequence[float],
+    detuning: Sequence[float],
+    offset: float = 0.0,
+) -> dict:
+    """Infidelity of what the codes play along each error, the other one being zero.
+
+    Args:
+        pulses: by name.
+        target: what they should do.
+        amplitude_error: [k] unitless, relative.
+        detuning: [m] rad/s, counted from ``offset``.
+        offset: rad/s, the job's own detuning.
+    Returns:
+        ``amplitude_error`` [k], ``detuning_MHz`` [m], and by pulse
+        ``against_amplitude`` [k], ``against_detuning`` [m].
+    """
+    eps, delta = np.asarray(amplitude_error, float), np.asarray(detuning, float)
+    table = {"amplitude_error": eps, "detuning_MHz": delta / MHZ, "pulses": {}}
+    for name, pulse in pulses.items():
+        drive, durations = pulse.played
+        table["pulses"][name] = {
+            "against_amplitude": infidelity(propagate(drive, durations, eps, offset), target),
+            "against_detuning": infidelity(
+                propagate(drive, durations, 0.0, offset + delta), target
+            ),
+        }
+    return table
+
+
+def map_table(
+    pulses: Mapping[str, Pulse],
+    target: Target,
+    amplitude_error: Sequence[float],
+    detuning: Sequence[float],
+    offset: float = 0.0,
+) -> dict:
+    """Infidelity of what the codes play over the plane of both errors; arguments as in a cut.
+
+    Returns:
+        ``amplitude_error`` [k], ``detuning_MHz`` [m], ``infidelity`` by pulse [k, m].
+    """
+    eps, delta = np.asarray(amplitude_error, float), np.asarray(detuning, float)
+    e, d = np.meshgrid(eps, delta, indexing="ij")
+    table = {"amplitude_error": eps, "detuning_MHz": delta / MHZ, "infidelity": {}}
+    for name, pulse in pulses.items():
+        q = propagate(*pulse.played, e, offset + d)
+        table["infidelity"][name] = infidelity(q, target)
+    return table
+
+
+def path_table(
+    pulses: Mapping[str, Pulse],
+    starts: Mapping[str, Sequence[float]],
+    amplitude_error: float = 0.0,
+    detuning: float = 0.0,
+) -> dict:
+    """The way of Bloch vectors while a pulse plays.
+
+    Args:
+        pulses: by name.
+        starts: label to Bloch vector at time zero.
+        amplitude_error: unitless, relative.
+        detuning: rad/s.
+    Returns:
+        By pulse and start label, ``bloch`` [point, 3] and ``time_ns`` [point], no step turning
+        by more than three degrees.
+    """
+    table: dict = {}
+    for name, pulse in pulses.items():
+        drive, durations = pulse.played
+        rate = np.hypot(np.hypot(*drive.T) * (1 + amplitude_error), detuning)
+        cut = np.maximum(1, np.ceil(rate * durations / _TURN_PER_POINT)).astype(int)
+        fine_drive, fine = np.repeat(drive, cut, axis=0), np.repeat(durations / cut, cut)
+        total, matrices = np.array([1.0, 0.0, 0.0, 0.0]), [np.eye(3)]
+        for step_drive, step in zip(fine_drive, fine, strict=True):
+            turn = propagate(step_drive[None], [step], amplitude_error, detuning)
+            total = product(turn, total)
+            matrices.append(bloch_matrix(total))
+        time_ns = np.concatenate([[0.0], np.cumsum(fine)]) / NS
+        table[name] = {
+            label: {"bloch": np.stack(matrices) @ np.asarray(start, float), "time_ns": time_ns}
+            for label, start in starts.items()
+        }
+    return table
+
+
+def spectrum_table(pulses: Mapping[str, Pulse], frequency: Sequence[float]) -> dict:
+    """Energy density of the steps that the DAC holds, against frequency from the carrier.
+
+    The Fourier integral of every step in closed form; relative to the largest value shown.
+
+    Args:
+        frequency: [k] rad/s.
+    Returns:
+        ``frequency_MHz`` [k] and by pulse ``density_dB`` [k].
+    """
+    omega = np.asarray(frequency, float)
+    density = {}
+    for name, pulse in pulses.items():
+        drive, durations = pulse.played
+        middle = np.cumsum(durations) - durations / 2
+        envelope = drive[:, 0] + 1j * drive[:, 1]
+        held = durations * np.sinc(np.outer(omega, durations) / (2 * np.pi))
+        density[name] = np.abs((held * np.exp(-1j * np.outer(omega, middle))) @ envelope) ** 2
+    largest = max((float(np.max(d)) for d in density.values()), default=0.0) or 1.0
+    floor = 1e-12  # of the largest: 120 dB down, below what any line passes on
+    return {
+        "frequency_MHz": omega / MHZ,
+        "pulses": {
+            name: {"density_dB": 10 * np.log10(np.maximum(d / largest, floor))}
+            for name, d in density.items()
+        },
+    }
+
+
+def plain(table):
+    """The table as JSON takes it: arrays to lists, nan to None."""
+    if isinstance(table, Mapping):
+        return {key: plain(value) for key, value in table.items()}
+    if isinstance(table, np.ndarray):
+        return plain(table.tolist())
+    if isinstance(table, (list, tuple)):
+        return [plain(value) for value in table]
+    if isinstance(table, np.generic):
+        return plain(table.item())
+    if isinstance(table, float) and not math.isfinite(table):
+        return None
+    return table
