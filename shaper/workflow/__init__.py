@@ -1,0 +1,1 @@
+"""The jobs of the project joined once, for the command line, scripts and notebooks."""
