@@ -110,6 +110,7 @@ class Score:
         dac: without errors, recomputed from the integer codes.
         dac_mean: over the tolerance box, from the codes.
         dac_worst: over the tolerance box, from the codes.
+        guaranteed: proved upper bound of dac_worst over every point of the box; None: not proved.
     """
 
     nominal: float
@@ -118,6 +119,7 @@ class Score:
     dac: float
     dac_mean: float
     dac_worst: float
+    guaranteed: float | None = None
 
 
 @dataclass(frozen=True)
@@ -137,8 +139,10 @@ class Waveform:
         error_scale: unitless.
         pulses: by name.
         scores: by name, for the same names.
-        history: name to (array, unit, long name, axis names).
+        history: tables about the search, by name.
         history_attrs: name to text or number, about the search.
+        evidence: tables about the pulses, by name.
+        notes: free text.
     """
 
     title: str
@@ -153,6 +157,9 @@ class Waveform:
     pulses: dict[str, Pulse]
     scores: dict[str, Score]
     history: dict[str, Table] = field(default_factory=dict)
+    history_attrs: dict[str, str | int | float] = field(default_factory=dict)
+    evidence: dict[str, Table] = field(default_factory=dict)
+    notes: str = ""
 
 
 @dataclass(frozen=True)
@@ -160,7 +167,7 @@ class Table:
     """A named-axis array with a unit, for history and evidence.
 
     Attributes:
-        values: [*axes] float64 or int64.
+        values: [*axes] float64 or int64; nan where there is no value.
         axes: name of each axis, e.g. ("start", "iteration").
         units: "1", "s", "rad/s".
         long_name: what it is, in words.
