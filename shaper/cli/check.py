@@ -1,0 +1,76 @@
+"""``shaper check``: is this job file right, and is it a good idea?"""
+
+from __future__ import annotations
+
+import sys
+
+_EXAMPLE = """example:
+  shaper check configs/z90.toml
+
+Warnings do not change the exit code; a faulty job file is exit code 2."""
+
+
+def add(commands):
+    """Declare the command's arguments."""
+    import argparse
+
+    command = commands.add_parser(
+        "check",
+        help="check a job file and say what it asks for, before the search is run",
+        description="Check a job file, print what follows from it (samples, angles, the shortest "
+        "possible duration, what T1 and T2 leave), and warn of what will go wrong.",
+        epilog=_EXAMPLE,
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    command.add_argument("job", metavar="JOB.toml", help="the job file")
+    command.add_argument("--json", action="store_true", help="print one JSON object, nothing else")
+    return command
+
+
+def run(args) -> int:
+    """Check the job; returns the exit code."""
+    import json
+
+    from shaper.cli.table import small
+    from shaper.job import read_job
+    from shaper.workflow.check import check_job
+
+    facts = check_job(read_job(args.job))
+    if args.json:
+        print(json.dumps(facts, indent=2, ensure_ascii=False))
+        return 0
+    over = facts["duration_over_shortest"]
+    lines = [
+        ("target", facts["target"]),
+        ("drive", f"{facts['rabi_max_MHz']:g} MHz Rabi at most, {facts['bound']}"),
+        (
+            "pulse",
+            f"{facts['duration_ns']:g} ns, {facts['slices']} slices, "
+            f"{facts['samples']} samples (loaded: {facts['padded_samples']})",
+        ),
+        (
+            "angle",
+            f"up to {facts['largest_angle_per_slice_deg']:.4g} degrees a slice, "
+            f"{facts['largest_total_angle_deg']:.5g} in all",
+        ),
+        (
+            "shortest",
+            f"{facts['shortest_duration_ns']:.6g} ns ({facts['shortest_duration_is']})"
+            + (f"; this pulse: {over:.4g} times that" if over else ""),
+        ),
+        ("sandwich", f"{facts['sandwich_duration_ns']:.6g} ns on the sample grid"),
+        (
+            "decay",
+            f"at least {small(facts['coherence_limited_infidelity'])} from T1 and T2"
+            if facts["coherence_limited_infidelity"] is not None
+            else "not asked for (no t1_us, t2_us)",
+        ),
+    ]
+    if facts["title"]:
+        print(facts["title"])
+    for name, text in lines:
+        print(f"  {name:<10}{text}")
+    for warning in facts["warnings"]:
+        print(f"shaper: warning: {warning}", file=sys.stderr)
+    print("valid" + (f", {len(facts['warnings'])} warning(s)" if facts["warnings"] else ""))
+    return 0

@@ -1,0 +1,185 @@
+"""What can be said of a job before a minute is spent on it: derived figures, and warnings."""
+
+from __future__ import annotations
+
+import math
+
+from shaper.composite import limit, place, sandwich, stepped_z_length
+from shaper.drive.dac import padded_length
+from shaper.job import Job
+from shaper.physics.decay import coherence_limit
+from shaper.units import DEG, MHZ, NS
+
+_HAIR = 1e-9  # relative; a duration this close below the limit is the limit
+_COARSE_SLICE = math.pi / 2  # a slice that turns further than this can hardly follow any shape
+_LEAKY_PERIODS = 2.0  # of the anharmonicity; a pulse shorter than this excites the next level
+
+
+def check_job(job: Job) -> dict:
+    """Derived figures of a job and what speaks against running it.
+
+    Returns:
+        A flat dict, unit in each key, None where a figure has no meaning; ``warnings`` is a
+        list of sentences, each with its remedy.
+    """
+    shortest = limit(job.target, job.bound) / job.rabi_max  # s
+    plain = place(sandwich(job.target, job.bound), job)
+    samples = job.slices * job.samples_per_slice
+    padded = padded_length(samples, job.granularity, job.min_samples)
+    decays = job.t1 is not None or job.t2 is not None
+    facts = {
+        "title": job.title,
+        "target": job.target_name,
+        "rabi_max_MHz": job.rabi_max / MHZ,
+        "bound": job.bound,
+        "duration_ns": job.duration / NS,
+        "slices": job.slices,
+        "samples": samples,
+        "padded_samples": padded,
+        "largest_angle_per_slice_deg": job.rabi_max * job.slice_duration / DEG,
+        "largest_total_angle_deg": job.rabi_max * job.duration / DEG,
+        "shortest_duration_ns": shortest / NS,
+        "shortest_duration_is": (
+            "time-optimal, published" if job.bound == "circle" else "best known for the box"
+        ),
+        "duration_over_shortest": job.duration / shortest if shortest > 0 else None,
+        "sandwich_duration_ns": plain.duration / NS,
+        "coherence_limited_infidelity": (
+            coherence_limit(job.duration, job.t1, job.t2) if decays else None
+        ),
+        "frame_update": frame_update(job),
+        "warnings": _warnings(job, shortest, padded - samples),
+    }
+    return {
+        key: float(f"{value:.12g}") if isinstance(value, float) else value  # 120, not 120.00..01
+        for key, value in facts.items()
+    }
+
+
+def frame_update(job: Job) -> str | None:
+    """Whether shifting the phase of all later pulses does the job: "enough", "instead" or None.
+
+    "enough": the target as stated needs no pulse at all. "instead": a z rotation whose pulse a
+    frame update could replace, unless the rotation must be physical. None: neither.
+    """
+    if job.target.needs_no_pulse:
+        return "enough"
+    if job.target.kind == "gate" and job.target.z_angle is not None:
+        return "instead"
+    return None
+
+
+def _warnings(job: Job, shortest: float, padding: int) -> list[str]:
+    found = [
+        _too_short(job, shortest),
+        _too_few_slices(job),
+        _frame(job),
+        _decay(job),
+        _leakage(job),
+        _padding(job, padding),
+        _drift(job),
+    ]
+    return [sentence for sentence in found if sentence]
+
+
+def _too_short(job: Job, shortest: float) -> str | None:
+    have, need = job.duration / NS, shortest / NS
+    kind = "no pulse can be" if job.bound == "circle" else "no pulse is known that is"
+    if have < need * (1 - _HAIR):
+        return (
+            f"pulse.duration_ns: {have:.6g} ns, but {kind} shorter than {need:.6g} ns for "
+            f"{job.target_name} at {job.rabi_max / MHZ:g} MHz; expect exit code 3. "
+            "Lengthen the pulse or raise drive.rabi_max_MHz"
+        )
+    weak = need / (1 - job.amplitude_tolerance)  # the drive at the low edge of its tolerance
+    if have < weak * (1 - _HAIR):
+        return (
+            f"tolerance.amplitude: with {100 * job.amplitude_tolerance:g} % less drive the gate "
+            f"takes at least {weak:.6g} ns, the pulse has {have:.6g} ns: that edge cannot be "
+            "met. Lengthen the pulse, or let --shortest find the duration"
+        )
+    return None
+
+
+def _too_few_slices(job: Job) -> str | None:
+    angle = job.target.z_angle
+    exact_z = job.target.kind == "gate" and job.target.free_axis is None and angle is not None
+    if job.bound == "circle" and exact_z and angle != 0 and job.slices > 1:
+        need = stepped_z_length(angle, job.slices) / job.rabi_max
+        if job.duration < need * (1 - _HAIR):
+            finer = job.slice_duration * job.sample_rate > 1
+            return (
+                f"pulse.slice_ns: {job.slices} equal slices need at least {need / NS:.6g} ns for "
+                f"{job.target_name}, the pulse has {job.duration / NS:.6g} ns. "
+                + ("Take shorter slices or a longer pulse" if finer else "Lengthen the pulse")
+            )
+    turn = job.rabi_max * job.slice_duration
+    if turn > _COARSE_SLICE:
+        return (
+            f"pulse.slice_ns: one slice turns by up to {turn / DEG:.4g} degrees; "
+            "take slices of at most 90 degrees, better a tenth of that"
+        )
+    return None
+
+
+def _frame(job: Job) -> str | None:
+    kind = frame_update(job)
+    if kind == "enough":
+        return (
+            f"target: {job.target_name} needs no pulse at all: a frame update (a phase shift of "
+            "all later pulses) does it, without error. Ask for the exact gate if the rotation "
+            "must be physical"
+        )
+    if kind == "instead":
+        return (
+            f"target: {job.target_name} is a z rotation: a frame update does it without a pulse "
+            "if every later pulse on this qubit can be shifted in phase. A pulse is worth its "
+            "error where that is not so"
+        )
+    return None
+
+
+def _decay(job: Job) -> str | None:
+    if job.stop_infidelity is None or (job.t1 is None and job.t2 is None):
+        return None
+    floor = coherence_limit(job.duration, job.t1, job.t2)
+    if floor <= job.stop_infidelity:
+        return None
+    return (
+        f"search.stop_infidelity: {job.stop_infidelity:.2g} is below what T1 and T2 leave in "
+        f"{job.duration / NS:.6g} ns, {floor:.2g}: the search may reach it, the bench will not. "
+        "Shorten the pulse or ask for less"
+    )
+
+
+def _leakage(job: Job) -> str | None:
+    if job.anharmonicity is None:
+        return None
+    periods = job.duration * abs(job.anharmonicity) / (2 * math.pi)
+    if periods >= _LEAKY_PERIODS:
+        return None
+    return (
+        f"qubit.anharmonicity_MHz: the pulse lasts {periods:.2g} periods of it; below "
+        f"{_LEAKY_PERIODS:g} the next level is hard to keep empty. Lengthen the pulse"
+    )
+
+
+def _padding(job: Job, padding: int) -> str | None:
+    if padding == 0:
+        return None
+    idle = padding / job.sample_rate / NS
+    return (
+        f"drive.granularity_samples, drive.min_samples: the AWG plays {padding} more samples of "
+        f"zero ({idle:.6g} ns) after the pulse; count them as idle time"
+    )
+
+
+def _drift(job: Job) -> str | None:
+    reach = abs(job.detuning) + job.detuning_tolerance
+    if reach <= job.rabi_max:
+        return None
+    return (
+        f"tolerance.detuning_MHz: the qubit may lie {reach / MHZ:.6g} MHz from the carrier, more "
+        f"than the largest Rabi frequency {job.rabi_max / MHZ:g} MHz; expect a long pulse. "
+        "Move the carrier or narrow the tolerance"
+    )

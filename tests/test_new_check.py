@@ -1,0 +1,279 @@
+"""``shaper new``, ``shaper check`` and the JSON Schema of the job file."""
+
+import io
+import json
+import math
+import tomllib
+import typing
+
+import jsonschema
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+
+from shaper.cli import main
+from shaper.cli.new import GATES
+from shaper.errors import InputError
+from shaper.job import parse_job
+from shaper.job.json_schema import SCHEMA_FILE, job_json_schema, schema_text
+from shaper.job.schema import JobFile, TargetSection
+from shaper.job.template import job_text, toml_value
+from shaper.workflow.check import check_job
+from shaper.workflow.new import Wish, new_job
+
+TABLE_DIGITS = 1e-9  # relative; figures of this module are rounded to twelve digits
+
+GOOD = """
+title = "Quarter turn"
+[qubit]
+t1_us = 60.0
+t2_us = 45.0
+[drive]
+rabi_max_MHz = 25.0
+sample_rate_MSps = 1000.0
+[target]
+gate = "z"
+angle_deg = 90.0
+[pulse]
+duration_ns = 60.0
+slice_ns = 1.0
+"""
+
+
+def job_with(*changes):
+    """GOOD with replacements."""
+    text = GOOD
+    for old, new in changes:
+        assert old in text
+        text = text.replace(old, new)
+    return parse_job(text)
+
+
+def warnings_of(*changes):
+    return check_job(job_with(*changes))["warnings"]
+
+
+# --- the schema -------------------------------------------------------------------------------
+
+
+def test_the_stored_schema_is_the_models():
+    assert SCHEMA_FILE.read_text(encoding="utf-8") == schema_text(), (
+        "job.schema.json is old: run python scripts/regenerate.py"
+    )
+
+
+def test_the_schema_is_a_schema_and_describes_every_key():
+    schema = job_json_schema()
+    jsonschema.Draft202012Validator.check_schema(schema)
+    assert set(schema["properties"]) == set(JobFile.model_fields)
+    for section in (schema, *schema["$defs"].values()):
+        assert section["additionalProperties"] is False
+        for key, value in section["properties"].items():
+            assert "description" in value or "$ref" in value or "items" in value, key
+    assert '"null"' not in json.dumps(schema)
+
+
+@pytest.mark.parametrize(
+    ("old", "new"),
+    [
+        ("rabi_max_MHz", "rabi_max_mHz"),
+        ("25.0", '"25"'),
+        ("25.0", "-25.0"),
+        ("gate = ", "gates = "),
+        ('"z"', '"zz"'),
+        ("[pulse]", "[pulses]"),
+        ("t1_us = 60.0", "t1_us = 0.0"),
+    ],
+)
+def test_schema_and_reader_refuse_the_same(old, new):
+    text = GOOD.replace(old, new)
+    assert list(jsonschema.Draft202012Validator(job_json_schema()).iter_errors(tomllib.loads(text)))
+    with pytest.raises(InputError):
+        parse_job(text)
+
+
+def test_schema_and_reader_take_the_same():
+    jsonschema.Draft202012Validator(job_json_schema()).validate(tomllib.loads(GOOD))
+
+
+# --- new --------------------------------------------------------------------------------------
+
+
+def test_every_key_of_the_schema_stands_in_a_new_job_with_its_comment():
+    text, _ = new_job(Wish("z", 90.0, 25.0))
+    for name, field in JobFile.model_fields.items():
+        if name != "title" and isinstance(field.annotation, type):
+            section = text[text.index(f"[{name}]") :]
+            for key, inner in field.annotation.model_fields.items():
+                line = next(
+                    x for x in section.splitlines() if x.lstrip("# ").startswith(f"{key} =")
+                )
+                assert (inner.description or "") in line
+
+
+@settings(max_examples=40, deadline=None)
+@given(
+    gate=st.sampled_from(GATES),
+    angle=st.floats(-720, 720),
+    rabi=st.floats(1e-3, 200),
+    bound=st.sampled_from(["circle", "box"]),
+    rate=st.sampled_from([1.0, 250.0, 1000.0, 2400.0, 1228.8]),
+    amplitude=st.sampled_from([0.0, 0.02]),
+)
+def test_a_new_job_is_valid_and_long_enough(gate, angle, rabi, bound, rate, amplitude):
+    wish = Wish(gate, angle if gate in "xyz" else None, rabi, bound, rate, amplitude)
+    text, job = new_job(wish)
+    facts = check_job(job)
+    assert facts["duration_ns"] >= facts["shortest_duration_ns"] * (1 - TABLE_DIGITS)
+    if amplitude:
+        assert job.rabi_max * job.duration >= 6 * math.pi * (1 - TABLE_DIGITS)
+    jsonschema.Draft202012Validator(job_json_schema()).validate(tomllib.loads(text))
+
+
+def test_a_given_duration_is_kept_whatever_the_slice():
+    for duration in (61.0, 60.0, 33.5):
+        _, job = new_job(Wish("z", 90.0, 25.0, sample_rate_MSps=2000.0, duration_ns=duration))
+        assert job.duration == pytest.approx(duration * 1e-9, rel=TABLE_DIGITS)
+
+
+def test_the_text_comes_back_as_it_went_in():
+    title = 'quote " backslash \\ line\nfeed \x01 umlaut ü'
+    values = {
+        "title": title,
+        "drive": {"rabi_max_MHz": 1 / 3, "sample_rate_MSps": 1e-7},
+        "target": {"unitary": [[[0.0, -1.0], [1e-300, 2.0]], [[3.0, 0.0], [0.0, 0.0]]]},
+        "pulse": {"duration_ns": 1e22, "slice_ns": 2.0},
+    }
+    back = tomllib.loads(job_text(values))
+    assert back["title"] == title
+    for section in ("drive", "target", "pulse"):
+        for key, value in values[section].items():
+            assert back[section][key] == value
+    with pytest.raises(TypeError, match="got dict"):
+        toml_value({})
+
+
+def test_flags_make_a_file_that_check_accepts(tmp_path, capsys, monkeypatch):
+    monkeypatch.setattr("sys.stdin", io.StringIO())
+    path = tmp_path / "first.toml"
+    flags = ["--gate", "z", "--angle-deg", "90", "--rabi-max-MHz", "25", "--amplitude", "0.02"]
+    assert main(["new", str(path), *flags]) == 0
+    assert path.read_text().startswith("#:schema ")
+    assert main(["check", str(path), "--json"]) == 0
+    out = capsys.readouterr().out
+    facts = json.loads(out[out.index("{") :])
+    assert facts["target"] == "z(90)"
+    assert main(["new", str(path), *flags]) == 2
+    assert "--replace" in capsys.readouterr().err
+    assert main(["new", str(path), *flags, "--replace", "--title", "again"]) == 0
+    assert 'title = "again"' in path.read_text()
+
+
+def test_questions_are_asked_until_the_answers_make_sense(tmp_path, capsys, monkeypatch):
+    class Terminal(io.StringIO):
+        def isatty(self):
+            return True
+
+    answers = ["frobnicate", "z", "", "many", "25", "", "", "0.01", ""]
+    monkeypatch.setattr("sys.stdin", Terminal("\n".join(answers) + "\n"))
+    path = tmp_path / "asked.toml"
+    assert main(["new", str(path)]) == 0
+    err = capsys.readouterr().err
+    assert "expected one of x, y, z" in err
+    assert "expected a number, got 'many'" in err
+    data = tomllib.loads(path.read_text())
+    assert data["target"] == {"gate": "z", "angle_deg": 90.0, "equivalence": "exact"}
+    assert data["tolerance"]["amplitude"] == 0.01
+
+
+@pytest.mark.parametrize(
+    ("flags", "words"),
+    [
+        ([], "--gate: expected this flag"),
+        (["--gate", "z"], "--rabi-max-MHz: expected this flag"),
+        (["--gate", "z", "--rabi-max-MHz", "0"], "expected a positive number, got 0"),
+        (["--gate", "z", "--rabi-max-MHz", "nan"], "expected a positive number, got nan"),
+        (["--gate", "z", "--rabi-max-MHz", "9", "--amplitude", "2"], "tolerance.amplitude"),
+        (["--gate", "z", "--rabi-max-MHz", "9", "--duration-ns", "3.3"], "pulse.duration_ns"),
+    ],
+)
+def test_wrong_wishes_write_nothing(tmp_path, capsys, monkeypatch, flags, words):
+    monkeypatch.setattr("sys.stdin", io.StringIO())
+    assert main(["new", str(tmp_path / "a.toml"), *flags]) == 2
+    assert words in capsys.readouterr().err
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_the_gates_offered_are_those_of_the_schema():
+    literal = typing.get_args(TargetSection.model_fields["gate"].annotation)[0]
+    assert set(GATES) == set(typing.get_args(literal))
+
+
+# --- check ------------------------------------------------------------------------------------
+
+
+def test_derived_figures_of_the_quarter_turn():
+    facts = check_job(job_with())
+    # z(theta): T W_max = sqrt(theta (4 pi - theta)) (Garon, Glaser and Sugny 2013), circle
+    theta = math.pi / 2
+    shortest = math.sqrt(theta * (4 * math.pi - theta)) / (2 * math.pi * 25e6) * 1e9
+    assert facts["shortest_duration_ns"] == pytest.approx(shortest, rel=TABLE_DIGITS)
+    assert facts["duration_over_shortest"] == pytest.approx(60 / shortest, rel=TABLE_DIGITS)
+    assert facts["sandwich_duration_ns"] == pytest.approx(30)  # 1.5 pi / W_max, whole samples
+    assert facts["largest_angle_per_slice_deg"] == pytest.approx(360 * 25e6 * 1e-9)
+    assert (facts["slices"], facts["samples"], facts["padded_samples"]) == (60, 60, 60)
+    # 1 - F_avg = 1/2 - e^(-t/T1)/6 - e^(-t/T2)/3 (idle qubit, Nielsen 2002)
+    floor = 0.5 - math.exp(-60e-9 / 60e-6) / 6 - math.exp(-60e-9 / 45e-6) / 3
+    assert facts["coherence_limited_infidelity"] == pytest.approx(floor, rel=1e-6)
+
+
+def test_a_sound_job_has_no_warning():
+    sound = [('gate = "z"', 'gate = "x"'), ("[pulse]", "[search]\nstop_infidelity = 0.01\n[pulse]")]
+    assert warnings_of(*sound) == []
+
+
+@pytest.mark.parametrize(
+    ("changes", "words"),
+    [
+        ([("60.0\nslice", "26.0\nslice")], "no pulse can be shorter than 26.4575 ns"),
+        (
+            [("60.0\nslice", "27.0\nslice"), ("[pulse]", "[tolerance]\namplitude = 0.05\n[pulse]")],
+            "--shortest",
+        ),
+        ([("60.0\nslice", "27.0\nslice"), ("slice_ns = 1.0", "slice_ns = 9.0")], "3 equal slices"),
+        ([("slice_ns = 1.0", "slice_ns = 15.0")], "up to 135 degrees"),
+        ([], "z(90) is a z rotation: a frame update does it without a pulse"),
+        (
+            [("angle_deg = 90.0", 'angle_deg = 90.0\nequivalence = "up_to_final_z"')],
+            "needs no pulse at all",
+        ),
+        ([], "search.stop_infidelity: 1e-09 is below what T1 and T2 leave"),
+        ([("t1_us = 60.0", "anharmonicity_MHz = -21.0")], "1.3 periods"),
+        ([("rabi_max_MHz", "min_samples = 128\nrabi_max_MHz")], "68 more samples of zero (68 ns)"),
+        ([("[pulse]", "[tolerance]\ndetuning_MHz = 30.0\n[pulse]")], "more than the largest Rabi"),
+    ],
+)
+def test_warnings_name_the_key_and_the_remedy(changes, words):
+    found = [w for w in warnings_of(*changes) if words in w]
+    assert len(found) == 1
+    assert found[0].split(":")[0].split(",")[0].split(".")[0] in JobFile.model_fields
+
+
+def test_box_bound_says_best_known():
+    facts = check_job(
+        job_with(("rabi_max_MHz", 'bound = "box"\nrabi_max_MHz'), ("60.0\nslice", "20.0\nslice"))
+    )
+    assert facts["shortest_duration_is"] == "best known for the box"
+    assert any("no pulse is known" in w for w in facts["warnings"])
+
+
+def test_check_prints_for_people_and_refuses_nonsense(tmp_path, capsys):
+    path = tmp_path / "a.toml"
+    path.write_text(GOOD)
+    assert main(["check", str(path)]) == 0
+    said = capsys.readouterr()
+    assert "26.4575 ns (time-optimal, published)" in said.out
+    assert "shaper: warning: target: z(90)" in said.err
+    path.write_text(GOOD.replace("duration_ns", "durations_ns"))
+    assert main(["check", str(path)]) == 2
+    assert "nearest known key: duration_ns" in capsys.readouterr().err
