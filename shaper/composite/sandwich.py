@@ -45,10 +45,14 @@ def sandwich(target: Target, bound: str) -> Sequence:
 
 def _shortest(q: np.ndarray, bound: str) -> Sequence:
     """Over the turns of the axes and both signs of the middle angle; ties: the first one."""
+    z_angle = Target(q).z_angle
     best: Sequence | None = None
     for turn in _TURNS[bound]:
-        turned = product(about_z(-turn), product(q, about_z(turn)))
-        for a, b, c in _yxy_solutions(turned):
+        if z_angle is not None:
+            solutions = [(math.pi / 2, z_angle, -math.pi / 2)]
+        else:
+            solutions = _yxy_solutions(product(about_z(-turn), product(q, about_z(turn))))
+        for a, b, c in solutions:
             y, x = turn + math.pi / 2, turn
             found = from_turns([(a, y), (b, x), (c, y)], _SOURCE, "sandwich")
             if best is None or length(found, bound) < length(best, bound) - 1e-12:

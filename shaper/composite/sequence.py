@@ -30,12 +30,15 @@ class Sequence:
         phases: [arc] rad. Arc k turns about ``cos(phase) x + sin(phase) y``.
         source: citation, or "" for our own.
         name: for tables.
+        uniform: play all arcs at one Rabi rate, the largest that all of them can have.
+            Compensation of detuning rests on it; under the circle it makes no difference.
     """
 
     angles: np.ndarray
     phases: np.ndarray
     source: str = ""
     name: str = ""
+    uniform: bool = False
 
     def __post_init__(self):
         angles = np.atleast_1d(np.asarray(self.angles, dtype=float))
@@ -106,17 +109,37 @@ def full_rate(phases: np.ndarray, bound: str) -> np.ndarray:
     return 1 / np.maximum(np.abs(np.cos(phases)), np.abs(np.sin(phases)))
 
 
+def arc_rates(sequence: Sequence, bound: str) -> np.ndarray:
+    """[arc] unitless: the Rabi rate of each arc at the bound, in units of W_max."""
+    rates = full_rate(sequence.phases, bound)
+    return np.full_like(rates, np.min(rates, initial=np.inf)) if sequence.uniform else rates
+
+
 def length(sequence: Sequence, bound: str) -> float:
     """Duration of the sequence at the bound, in units of 1/W_max."""
-    return float(np.sum(sequence.angles / full_rate(sequence.phases, bound)))
+    return float(np.sum(sequence.angles / arc_rates(sequence, bound)))
+
+
+def played_ideally(sequence: Sequence, job: Job) -> tuple[np.ndarray, np.ndarray]:
+    """The sequence at the job's bound on a clock without grain.
+
+    Returns:
+        drive [arc, 2] rad/s and duration [arc] s; one arc of no length if there is none.
+    """
+    if len(sequence.angles) == 0:
+        return np.zeros((1, 2)), np.zeros(1)
+    rates = job.rabi_max * arc_rates(sequence, job.bound)
+    direction = np.stack([np.cos(sequence.phases), np.sin(sequence.phases)], axis=-1)
+    return rates[:, None] * direction, sequence.angles / rates
 
 
 def place(sequence: Sequence, job: Job) -> Pulse:
     """The sequence on the job's sample grid, as it would really be loaded.
 
     Each arc is rounded up to whole samples and its amplitude lowered so that its angle stays
-    exact. An arc longer than a whole number of samples by round-off only stays at that number and
-    at the bound. A sequence without arcs is one sample of zero drive.
+    exact; a uniform sequence stays uniform only as far as the samples allow. An arc longer than a
+    whole number of samples by round-off only stays at that number and at the bound. A sequence
+    without arcs is one sample of zero drive.
     """
     keep = sequence.angles > _NO_ANGLE
     angles, phases = sequence.angles[keep], sequence.phases[keep]
@@ -124,7 +147,7 @@ def place(sequence: Sequence, job: Job) -> Pulse:
     if len(angles) == 0:
         samples, drive = np.ones(1, dtype=int), np.zeros((1, 2))
     else:
-        ceiling = job.rabi_max * full_rate(phases, job.bound)  # [arc] rad/s
+        ceiling = job.rabi_max * arc_rates(sequence, job.bound)[keep]  # [arc] rad/s
         exact = angles / ceiling * job.sample_rate
         samples = np.maximum(np.ceil(exact * (1 - _SAMPLE_HAIR)), 1).astype(int)
         rate = np.minimum(angles * job.sample_rate / samples, ceiling)
