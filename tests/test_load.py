@@ -2,61 +2,21 @@
 
 import hashlib
 import json
-import math
 import struct
+from pathlib import Path
 
 import numpy as np
 import pytest
+from awg_case import pulse, waveform
 
 import shaper.awg.folder as folder_room
 from shaper.awg.folder import read_folder, write_folder
 from shaper.cli import main
 from shaper.errors import FileError, InputError, ReadBackError
-from shaper.pulse import Score, Waveform, make_pulse
+from shaper.store import save_waveform
 from shaper.workflow.load import waveform_into_folder
 
-JOB = """
-title = "Quarter turn, Alder bench"
-[drive]
-rabi_max_MHz = 25.0
-sample_rate_MSps = 1000.0
-dac_bits = 14
-granularity_samples = 16
-min_samples = 64
-[target]
-gate = "z"
-angle_deg = 90.0
-[pulse]
-duration_ns = 60.0
-slice_ns = 1.0
-"""
-FULL_SCALE = 2 * math.pi * 25e6
 TOP = 2**13 - 1
-
-
-def pulse(samples, rng, **changes):
-    angle, radius = rng.uniform(-np.pi, np.pi, samples), rng.uniform(0.1, 1, samples)
-    drive = FULL_SCALE * radius[:, None] * np.stack([np.cos(angle), np.sin(angle)], axis=1)
-    settings = {"full_scale": FULL_SCALE, "bits": 14, "bound": "circle", "sample_rate": 1e9}
-    return make_pulse(drive, np.ones(samples), origin="optimized", **(settings | changes))
-
-
-def waveform(rng, samples=60):
-    score = Score(1e-10, 1e-9, 1e-8, 1e-7, 1e-7, 1e-7)
-    pulses = {"shaped": pulse(samples, rng), "sandwich": pulse(80, rng)}
-    return Waveform(
-        "Quarter turn",
-        JOB,
-        "2026-01-01T00:00:00Z",
-        "shaper",
-        7,
-        "converged",
-        np.array([1.0, 0, 0, 0]),
-        np.eye(4),
-        1.0,
-        pulses,
-        {name: score for name in pulses},
-    )
 
 
 @pytest.mark.parametrize("order, sign", [("big", ">"), ("little", "<")])
@@ -171,17 +131,37 @@ def test_a_folder_that_cannot_be_made_is_one_line(tmp_path, rng):
         waveform_into_folder(waveform(rng), tmp_path / "file")
 
 
-def test_command(tmp_path, rng, capsys, monkeypatch):
-    import shaper.workflow.load as job
-
-    store = pytest.importorskip("shaper.store")
-    monkeypatch.setattr(store, "load_waveform", lambda path: waveform(rng))
-    monkeypatch.setattr(job, "read_file", lambda path, limit: b"")
-    out = str(tmp_path / "out")
-    assert main(["load", "z90.h5", "--folder", out, "--pulse", "shaped", "--json"]) == 0
+def test_command(tmp_path, rng, capsys):
+    file, out = str(tmp_path / "z90.h5"), str(tmp_path / "out")
+    save_waveform(file, waveform(rng))
+    assert main(["load", file, "--folder", out, "--pulse", "shaped", "--json"]) == 0
     printed = capsys.readouterr()
     document = json.loads(printed.out)
     assert printed.err == "" and printed.out.count("\n") == 1
     assert [entry["name"] for entry in document["pulses"]] == ["shaped"]
-    assert main(["load", "z90.h5", "--folder", out, "--pulse", "other"]) == 2
-    assert capsys.readouterr().err.count("\n") == 1
+    assert document["waveform"]["sha256"] == hashlib.sha256(Path(file).read_bytes()).hexdigest()
+    assert main(["load", file, "--folder", out]) == 0
+    assert "read back equal" in capsys.readouterr().out
+
+
+@pytest.mark.parametrize(
+    "options, code",
+    [
+        (["z90.h5", "--folder", "out", "--pulse", "other"], 2),
+        (["z90.h5"], 2),  # neither a folder nor an instrument
+        (["z90.h5", "--folder", "out", "--scale", "0.5"], 2),
+        (["z90.h5", "z90.h5", "--folder", "out"], 2),
+        (["z90.h5", "--to", "127.0.0.1:1"], 2),  # no profile
+        (["nonesuch.h5", "--folder", "out"], 1),
+        (["z90.h5", "--folder", "z90.h5"], 1),
+    ],
+)
+def test_wrong_use_is_one_line_and_writes_nothing(
+    tmp_path, rng, capsys, monkeypatch, options, code
+):
+    monkeypatch.chdir(tmp_path)
+    save_waveform("z90.h5", waveform(rng))
+    assert main(["load", *options]) == code
+    printed = capsys.readouterr()
+    assert printed.out == "" and printed.err.count("\n") == 1
+    assert [path.name for path in tmp_path.iterdir()] == ["z90.h5"]

@@ -150,3 +150,17 @@ def place(codes: np.ndarray, bits: int, *, justify: str, gate: np.ndarray, bit: 
             raise ValueError(f"marker bit: expected one of the {free} free low bits, got {bit}")
         words[:, 0] |= np.asarray(gate, dtype=np.int16) << bit
     return words
+
+
+def unplace(
+    words: np.ndarray, bits: int, justify: str, bit: int | None
+) -> tuple[np.ndarray, np.ndarray]:
+    """Codes and gate from the instrument's words: the inverse of ``place``.
+
+    Returns:
+        [sample, 2] int16 and [sample] bool.
+    """
+    words = np.asarray(words, dtype=np.int16)
+    free = WORD_BITS - bits if justify == "left" else 0
+    gate = np.zeros(len(words), bool) if bit is None else (words[:, 0] >> bit & 1).astype(bool)
+    return words >> free, gate

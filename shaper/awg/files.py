@@ -2,47 +2,34 @@
 
 from __future__ import annotations
 
-import contextlib
 import hashlib
 import json
 import os
-import tempfile
+import stat
 from pathlib import Path
 
 from shaper.errors import FileError
+from shaper.store import atomic
 
 
 def replace_file(path: Path, data: bytes, *, lasting: bool = True) -> None:
     """Put ``data`` at ``path``: a reader sees the old content or the new, never a part.
 
     Args:
-        lasting: also survive a power cut (fsync), which costs milliseconds.
+        lasting: also survive a power cut (fsync), which costs milliseconds. Without it there
+            must be only one writer.
     Raises:
-        FileError: if it cannot be written; nothing half-written stays.
+        FileError: if it cannot be written.
     """
-    scratch = None
+    if lasting:
+        atomic.replace_file(path, data)
+        return
+    scratch = path.with_name(f".{path.name}.tmp")
     try:
-        handle, scratch = tempfile.mkstemp(".tmp", f".{path.name}.", path.parent)
-        with open(handle, "wb") as file:
-            file.write(data)
-            if lasting:
-                file.flush()
-                os.fsync(file.fileno())
-        os.chmod(scratch, 0o644)
+        scratch.write_bytes(data)
         os.replace(scratch, path)
-        scratch = None
-        if lasting:
-            folder = os.open(path.parent, os.O_RDONLY)
-            try:
-                os.fsync(folder)
-            finally:
-                os.close(folder)
     except OSError as error:
-        raise FileError(f"{path}: cannot write the file: {error.strerror}") from error
-    finally:
-        if scratch is not None:
-            with contextlib.suppress(OSError):
-                os.unlink(scratch)
+        raise FileError(f"{path}: cannot write: {error.strerror}") from error
 
 
 def read_file(path: Path, limit: int) -> bytes:
@@ -53,9 +40,11 @@ def read_file(path: Path, limit: int) -> bytes:
     """
     try:
         with open(path, "rb") as file:
+            if not stat.S_ISREG(os.fstat(file.fileno()).st_mode):
+                raise FileError(f"{path}: expected a regular file")
             data = file.read(limit + 1)
     except OSError as error:
-        raise FileError(f"{path}: cannot read the file: {error.strerror}") from error
+        raise FileError(f"{path}: cannot read: {error.strerror}") from error
     if len(data) > limit:
         raise FileError(f"{path}: expected at most {limit} bytes")
     return data
