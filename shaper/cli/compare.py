@@ -5,45 +5,113 @@ from __future__ import annotations
 import json
 import sys
 
+_WIDTH = 100  # columns of running text
+FRAME_UPDATE = {
+    "enough": "the target as stated needs no pulse: shift the phase of all later pulses by the z "
+    "angle instead. It takes no time and has no error.",
+    "instead": "shifting the phase of all later pulses does the same in no time and without error. "
+    "It cannot replace the pulse where the rotation must happen on the qubit itself: next to a "
+    "drive or coupling whose phase cannot be shifted with it, between parts of a sequence that "
+    "refocuses, or where others read the qubit in their own frame.",
+}
+
 
 def add(commands):
     """Declare the command's arguments."""
     command = commands.add_parser(
         "compare",
-        help="score the pulses of a waveform file side by side",
-        description="Score every pulse of a waveform file on one grid over the tolerance box of "
+        help="measure the pulses of a waveform file side by side, and against composites",
+        description="Measure every pulse of a waveform file on one grid over the tolerance box of "
         "its job, as the DAC codes play it: duration and its ratio to the shortest possible, "
-        "peak, rms, energy, and average gate infidelity without errors, mean and worst.",
+        "peak, rms, energy, average gate infidelity without errors, mean, worst and guaranteed, "
+        "tolerance windows, error orders, and what T1 and T2 take; with a verdict.",
     )
     command.add_argument("file", metavar="FILE.h5", help="waveform file")
+    command.add_argument(
+        "--against",
+        metavar="NAME",
+        nargs="+",
+        default=[],
+        help="composite pulses of the library to set beside them: names, or all",
+    )
     command.add_argument("--json", action="store_true", help="print one JSON object")
     command.add_argument(
         "--figure", metavar="FILE", help="draw waveforms and cuts (.png, .svg, .pdf)"
     )
+    command.add_argument("--maps", metavar="FILE", help="draw maps over both errors")
     return command
 
 
 def run(args) -> int:
     """Run it; returns the exit code."""
     from shaper.store import load_waveform
-    from shaper.workflow.compare import as_json, compare, draw
+    from shaper.workflow.compare import as_json, compare, draw, draw_maps
 
-    comparison = compare(load_waveform(args.file))
-    if args.figure:
-        draw(comparison, args.figure)
-        print(f"shaper: figure in {args.figure}", file=sys.stderr)
+    comparison = compare(load_waveform(args.file), args.against)
+    for path, picture in ((args.figure, draw), (args.maps, draw_maps)):
+        if path:
+            picture(comparison, path)
+            print(f"shaper: figure in {path}", file=sys.stderr)
     print(json.dumps(as_json(comparison)) if args.json else text(comparison))
     return 0
 
 
 def text(comparison) -> str:
-    """The comparison as people read it: what was asked, then one line a pulse."""
-    from shaper.cli.table import aligned, plain, rate_unit, small, time_unit
+    """The comparison as people read it: what was asked, two tables, the verdict."""
+    from textwrap import TextWrapper
+
+    from shaper.evidence.verdict import sentence
+    from shaper.readable import rate, time
+
+    fill = TextWrapper(_WIDTH, break_on_hyphens=False).fill
+    job = comparison.job
+    kind = "time-optimal" if job.bound == "circle" else "best known"
+    sides = []
+    if job.amplitude_tolerance:
+        sides.append(f"amplitude +-{100 * job.amplitude_tolerance:g} %")
+    if job.detuning_tolerance:
+        sides.append(f"detuning +-{rate(job.detuning_tolerance, 6)}")
+    decay = [
+        f"{name} {time(value, 6)}" for name, value in (("T1", job.t1), ("T2", job.t2)) if value
+    ]
+    measure = "Average gate infidelity" if job.target.kind == "gate" else "One minus the transfer"
+    lines = [
+        *([job.title] if job.title else []),
+        f"target     {job.target_name}",
+        f"drive      {rate(job.rabi_max, 6)} Rabi ({job.bound}), {job.dac_bits} bits",
+        f"tolerance  {', '.join(sides) or 'none: nominal, mean and worst are one'}",
+        *([f"decay      {', '.join(decay)}"] if decay else []),
+        f"limit      {time(comparison.shortest, 6)} ({kind}, without errors)",
+        "",
+        _main_table(comparison),
+        "",
+        fill(
+            f"{measure}, from the DAC codes. Mean and worst: over the tolerance box"
+            + (" on one grid; guaranteed: proved for every point of it." if sides else "."),
+        ),
+        "",
+        _robustness_table(comparison),
+        "",
+        fill(
+            "On paper: worst case of the sequence itself, before sample grid and codes. Windows: "
+            "largest +- error with infidelity below that, the other error zero. Leading terms: of "
+            "the infidelity in the amplitude error e and in f = detuning / W_max. Decay: "
+            "infidelity of idling as long (T1, T2); total: worst plus decay.",
+        ),
+    ]
+    if comparison.frame_update:
+        lines += ["", fill("Frame update: " + FRAME_UPDATE[comparison.frame_update])]
+    return "\n".join([*lines, "", fill(f"Verdict: {sentence(comparison.verdict, job)}")])
+
+
+def _main_table(comparison) -> str:
+    from shaper.cli.table import aligned, plain, small
+    from shaper.readable import rate_unit, time_unit
 
     job, rows = comparison.job, comparison.rows
     time, second = time_unit(max(row.duration for row in rows))
     rate, hertz = rate_unit(job.rabi_max)
-    proved = any(row.guaranteed is not None for row in rows)
+    proved = job.has_tolerance
     header = ["pulse", f"duration {time}", "/ limit", f"peak {rate}", f"rms {rate}"]
     header += ["energy rad^2/" + time, "nominal", "mean", "worst"] + ["guaranteed"] * proved
     table = [
@@ -61,27 +129,36 @@ def text(comparison) -> str:
         + [small(row.guaranteed)] * proved
         for row in rows
     ]
-    kind = "time-optimal" if job.bound == "circle" else "best known"
-    width = job.detuning_tolerance
-    box_rate, box_hertz = rate_unit(width)
-    box = (
-        f"amplitude +-{100 * job.amplitude_tolerance:g} %, "
-        f"detuning +-{width / box_hertz:g} {box_rate}"
-        if job.has_tolerance
-        else "none: nominal, mean and worst are one"
-    )
-    return "\n".join(
+    if comparison.frame_update:
+        table.append(["(frame update)", "0", "-", "0", "0", "0"] + ["0"] * (3 + proved))
+    return aligned(header, table)
+
+
+def _robustness_table(comparison) -> str:
+    from shaper.cli.table import aligned, plain, small
+    from shaper.readable import rate_unit
+
+    rows = comparison.rows
+    rate, hertz = rate_unit(max(row.detuning_windows[-1] for row in rows))
+    header = ["pulse", "on paper", "e < 1e-4", "e < 1e-3", f"f < 1e-4 {rate}", f"f < 1e-3 {rate}"]
+    header += ["leading in e", "leading in f", "decay", "total"]
+
+    def term(found, letter: str) -> str:
+        return f"{found.coefficient:.2g} {letter}^{found.order}" if found.order else "0"
+
+    return aligned(
+        header,
         [
-            *([job.title] if job.title else []),
-            f"target     {job.target_name}",
-            f"drive      {job.rabi_max / hertz:g} {rate} Rabi ({job.bound}), {job.dac_bits} bits",
-            f"tolerance  {box}",
-            f"limit      {comparison.shortest / second:.6g} {time} ({kind}, without errors)",
-            "",
-            aligned(header, table),
-            "",
-            "Average gate infidelity, from the DAC codes."
-            if job.target.kind == "gate"
-            else "One minus the transfer probability, from the DAC codes.",
-        ]
+            [
+                row.name,
+                small(row.ideal_worst),
+                *(f"{100 * window:.3g} %" for window in row.amplitude_windows),
+                *(plain(window / hertz, 3) for window in row.detuning_windows),
+                term(row.amplitude_order, "e"),
+                term(row.detuning_order, "f"),
+                small(row.coherence),
+                small(row.total),
+            ]
+            for row in rows
+        ],
     )

@@ -4,19 +4,6 @@ from __future__ import annotations
 
 import math
 
-_TIME = (("s", 1.0), ("ms", 1e-3), ("us", 1e-6), ("ns", 1e-9))
-_RATE = (("MHz", 2e6 * math.pi), ("kHz", 2e3 * math.pi), ("Hz", 2 * math.pi))
-
-
-def time_unit(longest: float) -> tuple[str, float]:
-    """Name and size (s) of the unit in which the longest time reads as 1 or more."""
-    return next((u for u in _TIME if longest >= u[1]), _TIME[-1])
-
-
-def rate_unit(largest: float) -> tuple[str, float]:
-    """Name and size (rad/s) of the unit in which the largest rate reads as 0.1 or more."""
-    return next((u for u in _RATE if largest >= 0.1 * u[1]), _RATE[-1])
-
 
 def small(value: float | None) -> str:
     """An infidelity in two digits after the point, e.g. 1.24e-05; "-" for none."""
@@ -39,4 +26,4 @@ def aligned(header: list[str], rows: list[list[str]]) -> str:
         )
         return "  ".join([first, *others]).rstrip()
 
-    return "\n".join([line(header), "-" * len(line(header)), *map(line, rows)])
+    return "\n".join([line(header), "-" * (sum(widths) + 2 * len(widths) - 2), *map(line, rows)])

@@ -9,6 +9,7 @@ shortest drives: the geodesic under the circle, the best known sequence in the b
 from __future__ import annotations
 
 import dataclasses
+import difflib
 import math
 
 import numpy as np
@@ -17,8 +18,11 @@ from shaper.composite.box import shortest_box
 from shaper.composite.geodesic import stepped_on_grid
 from shaper.composite.library import LIBRARY, Composite
 from shaper.composite.sandwich import sandwich
-from shaper.composite.sequence import Sequence, concatenate, from_turns, length
+from shaper.composite.sequence import Sequence, concatenate, from_turns, length, place
+from shaper.composite.smooth import smooth_pulses
+from shaper.errors import InputError
 from shaper.job import Job
+from shaper.pulse import Pulse
 from shaper.rotation import canonical
 from shaper.target import Target
 
@@ -119,3 +123,47 @@ def _turned_to_shortest(sequence: Sequence, target: Target, bound: str) -> Seque
 
 def _by_length(sequence: Sequence) -> float:
     return round(length(sequence, "box"), 12)
+
+
+@dataclasses.dataclass(frozen=True)
+class Loadable:
+    """One pulse of the library for a job.
+
+    Attributes:
+        pulse: on the sample grid, as it would be loaded.
+        sequence: on paper; None for smooth pulses, which are samples from the start.
+    """
+
+    pulse: Pulse
+    sequence: Sequence | None
+
+
+def library_pulses(job: Job, names: list[str] | None = None) -> dict[str, Loadable]:
+    """Pulses of the library for the job's target, by name.
+
+    Args:
+        names: which ones, in this order; None for all.
+    Raises:
+        InputError: for a name that the library does not have for this target.
+    """
+    sequences = compositions(job)
+    found = {name: Loadable(place(sequence, job), sequence) for name, sequence in sequences.items()}
+    if sequences:
+        smooth = smooth_pulses(single(job.target, job.bound), job)
+        found |= {name: Loadable(pulse, None) for name, pulse in smooth.items()}
+    if names is None:
+        return found
+    for name in names:
+        if name not in found:
+            raise InputError(_unknown(name, found, job))
+    return {name: found[name] for name in names}
+
+
+def _unknown(name: str, found: dict, job: Job) -> str:
+    """What is wrong with a name that was asked for."""
+    if not found:
+        return f"{name}: {job.target_name} needs no pulse, so the library has none for it"
+    by_letters = {known.lower(): known for known in found}
+    near = difflib.get_close_matches(name.lower(), by_letters, n=1, cutoff=0.5)
+    hint = f"; nearest: {by_letters[near[0]]}" if near else ""
+    return f"{name}: expected one of {', '.join(found)}, got {name!r}{hint}"

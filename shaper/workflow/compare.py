@@ -2,56 +2,29 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
 
 from shaper.composite import limit
-from shaper.evidence.score import score
-from shaper.evidence.tables import cut_table, plain, waveform_table
+from shaper.composite.compose import library_pulses
+from shaper.evidence.row import Row, measure
+from shaper.evidence.tables import cut_table, map_table, plain, waveform_table
+from shaper.evidence.verdict import Change, Verdict, judge, sentence
 from shaper.job import Job, parse_job
 from shaper.pulse import Pulse, Waveform
 from shaper.units import MHZ, NS, US
+from shaper.workflow.check import frame_update
 
 _CUT_POINTS = 121
+_MAP_POINTS = 81
+_MOST_MAPS = 6  # beyond that a picture becomes a wall
+_MOST_DRAWN = 6  # waveforms and cuts in one picture
 _BEYOND = 2.0  # cuts reach this many tolerances to either side
 _CUT_AMPLITUDE = 0.1  # relative; how far the cut reaches where the job names no tolerance
 _CUT_DETUNING = 0.1  # of the largest Rabi rate, likewise
-
-
-@dataclass(frozen=True)
-class Row:
-    """One pulse of the comparison; every figure from its integer codes.
-
-    Attributes:
-        name: as in the file.
-        origin: "optimized" or "composite".
-        source: citation, or "".
-        duration: s.
-        over_limit: duration over the shortest possible (circle) or known (box) for this target;
-            nan where the target needs no pulse.
-        peak: largest amplitude, rad/s.
-        rms: of the amplitude over the duration, rad/s.
-        energy: integral of the squared amplitude, rad^2/s.
-        nominal: infidelity without errors.
-        mean: infidelity over the tolerance box.
-        worst: largest infidelity on the grid over the tolerance box.
-        guaranteed: proved upper bound of it over the whole box, None where none was proved.
-    """
-
-    name: str
-    origin: str
-    source: str
-    duration: float
-    over_limit: float
-    peak: float
-    rms: float
-    energy: float
-    nominal: float
-    mean: float
-    worst: float
-    guaranteed: float | None
 
 
 @dataclass(frozen=True)
@@ -61,52 +34,53 @@ class Comparison:
     Attributes:
         job: what was asked.
         shortest: s. Time-optimal (circle) or best known (box) duration for this target.
-        pulses: by name, in the order of the rows.
+        pulses: by name, in the order of the rows: those of the file, then those of the library.
         rows: one a pulse.
+        verdict: who wins, and where the answer changes.
+        frame_update: "enough", "instead" or None, see ``workflow.check.frame_update``.
     """
 
     job: Job
     shortest: float
     pulses: dict[str, Pulse]
     rows: tuple[Row, ...]
+    verdict: Verdict
+    frame_update: str | None
 
 
-def compare(waveform: Waveform) -> Comparison:
-    """Score every pulse of a waveform file anew, on one grid, from its codes.
+def compare(waveform: Waveform, against: Sequence[str] = ()) -> Comparison:
+    """Measure every pulse of a waveform file anew, on one grid, from its codes.
 
-    The figures stored in the file are not trusted: all are computed here. Only the guaranteed
-    bound is taken over, since its proof takes longer than a comparison may.
+    The figures stored in the file are not trusted: all are computed here, the guaranteed bound
+    too.
 
     Args:
         waveform: as ``shaper.load_waveform`` gives it.
+        against: names of the composite library, or "all" of it. A pulse that the file holds
+            already, by name or code by code, is not taken twice.
     Raises:
-        InputError: if the job that the file carries is not valid.
+        InputError: if the job that the file carries is not valid, or the library has no such name.
     """
     job = parse_job(waveform.job_text, "job in the file")
     shortest = limit(job.target, job.bound) / job.rabi_max
+    pulses = dict(waveform.pulses)
+    sequences = {}
+    wanted = None if "all" in against else list(against)
+    for name, found in (library_pulses(job, wanted) if against else {}).items():
+        same = [known for known, pulse in pulses.items() if _same(pulse, found.pulse)]
+        for known in same:
+            sequences.setdefault(known, found.sequence)
+        if not same and name not in pulses:
+            pulses[name], sequences[name] = found.pulse, found.sequence
     rows = tuple(
-        _row(name, pulse, job, shortest, waveform.scores[name].guaranteed)
-        for name, pulse in waveform.pulses.items()
+        measure(name, pulse, job, shortest, sequences.get(name)) for name, pulse in pulses.items()
     )
-    return Comparison(job, shortest, dict(waveform.pulses), rows)
+    return Comparison(job, shortest, pulses, rows, judge(rows, pulses, job), frame_update(job))
 
 
-def _row(name: str, pulse: Pulse, job: Job, shortest: float, guaranteed: float | None) -> Row:
-    result = score(pulse, job)
-    return Row(
-        name=name,
-        origin=pulse.origin,
-        source=pulse.source,
-        duration=pulse.duration,
-        over_limit=pulse.duration / shortest if shortest > 0 else float("nan"),
-        peak=pulse.peak,
-        rms=pulse.rms,
-        energy=pulse.energy,
-        nominal=result.dac,
-        mean=result.dac_mean,
-        worst=result.dac_worst,
-        guaranteed=guaranteed,
-    )
+def _same(a: Pulse, b: Pulse) -> bool:
+    """Whether the DAC would play the same."""
+    return a.full_scale == b.full_scale and np.array_equal(a.codes, b.codes)
 
 
 def cuts(comparison: Comparison) -> dict:
@@ -117,9 +91,39 @@ def cuts(comparison: Comparison) -> dict:
     """
     job = comparison.job
     side = np.linspace(-1, 1, _CUT_POINTS)
-    amplitude = _BEYOND * job.amplitude_tolerance or _CUT_AMPLITUDE
-    detuning = _BEYOND * job.detuning_tolerance or _CUT_DETUNING * job.rabi_max
+    amplitude, detuning = _reach(job)
     return cut_table(comparison.pulses, job.target, amplitude * side, detuning * side, job.detuning)
+
+
+def _reach(job: Job) -> tuple[float, float]:
+    """How far cuts and maps go, in amplitude (relative) and detuning (rad/s)."""
+    return (
+        _BEYOND * job.amplitude_tolerance or _CUT_AMPLITUDE,
+        _BEYOND * job.detuning_tolerance or _CUT_DETUNING * job.rabi_max,
+    )
+
+
+def maps(comparison: Comparison, names: Sequence[str] | None = None) -> dict:
+    """Infidelity over both errors, see ``evidence.tables.map_table``; reach as of the cuts.
+
+    Args:
+        names: which pulses; default: those of the file, the verdict's two, and the best others,
+            six in all.
+    """
+    job = comparison.job
+    side = np.linspace(-1, 1, _MAP_POINTS)
+    amplitude, detuning = _reach(job)
+    shown = {name: comparison.pulses[name] for name in names or _worth_a_map(comparison)}
+    return map_table(shown, job.target, amplitude * side, detuning * side, job.detuning)
+
+
+def _worth_a_map(comparison: Comparison) -> list[str]:
+    """The shaped pulses, then the others by their worst case, six at most."""
+    rows = sorted(comparison.rows, key=lambda row: (row.origin != "optimized", row.worst))
+    baseline = [row for row in rows if row.name in ("sandwich", "plain")]
+    first = [row for row in rows if row.origin == "optimized"][:2] + baseline[:1]
+    rest = [row for row in rows if row not in first]
+    return [row.name for row in [*first, *rest][:_MOST_MAPS]]
 
 
 def as_json(comparison: Comparison) -> dict:
@@ -136,39 +140,93 @@ def as_json(comparison: Comparison) -> dict:
                 "amplitude": job.amplitude_tolerance,
                 "detuning_MHz": job.detuning_tolerance / MHZ,
             },
-            "pulses": [
-                {
-                    "name": row.name,
-                    "origin": row.origin,
-                    "source": row.source,
-                    "duration_ns": row.duration / NS,
-                    "duration_over_shortest": row.over_limit,
-                    "peak_MHz": row.peak / MHZ,
-                    "rms_MHz": row.rms / MHZ,
-                    "energy_rad2_per_us": row.energy * US,
-                    "infidelity": row.nominal,
-                    "infidelity_mean": row.mean,
-                    "infidelity_worst": row.worst,
-                    "infidelity_guaranteed": row.guaranteed,
-                }
-                for row in comparison.rows
-            ],
+            "pulses": [_row_json(row) for row in comparison.rows],
+            "frame_update": comparison.frame_update,
+            "verdict": verdict_json(comparison.verdict, job),
             "cuts": cuts(comparison),
         }
     )
 
 
+def _row_json(row: Row) -> dict:
+    windows = {}
+    for k, threshold in enumerate(("1e-4", "1e-3")):
+        windows[f"amplitude_window_{threshold}"] = row.amplitude_windows[k]
+        windows[f"detuning_window_{threshold}_MHz"] = row.detuning_windows[k] / MHZ
+    return {
+        "name": row.name,
+        "origin": row.origin,
+        "source": row.source,
+        "duration_ns": row.duration / NS,
+        "duration_over_shortest": row.over_limit,
+        "peak_MHz": row.peak / MHZ,
+        "rms_MHz": row.rms / MHZ,
+        "energy_rad2_per_us": row.energy * US,
+        "infidelity": row.nominal,
+        "infidelity_mean": row.mean,
+        "infidelity_worst": row.worst,
+        "infidelity_guaranteed": row.guaranteed,
+        "infidelity_worst_on_paper": row.ideal_worst,
+        "infidelity_of_idling": row.coherence,
+        "infidelity_worst_with_decay": row.total,
+        **windows,
+        "amplitude_order": row.amplitude_order.order,
+        "amplitude_coefficient": row.amplitude_order.coefficient,
+        "detuning_order": row.detuning_order.order,
+        "detuning_coefficient": row.detuning_order.coefficient,
+    }
+
+
+def verdict_json(verdict: Verdict, job: Job) -> dict:
+    """The verdict as plain data, its sentence with it."""
+
+    def change(found: Change | None, unit: float = 1.0) -> dict | None:
+        return found and {"at": found.at / unit, "winner": found.winner}
+
+    return {
+        "sentence": sentence(verdict, job),
+        "winner": verdict.winner.name,
+        "rival": verdict.rival and verdict.rival.name,
+        "factor": verdict.factor,
+        "below_t2_us": change(verdict.shorter_t2, US),
+        "above_t2_us": change(verdict.longer_t2, US),
+        "below_box": change(verdict.smaller_box),
+        "above_box": change(verdict.larger_box),
+    }
+
+
 def draw(comparison: Comparison, path: str | Path) -> None:
-    """The comparison as a picture; the file's suffix decides the format."""
+    """Waveforms and cuts as a picture; the file's suffix decides the format.
+
+    Six pulses at most, the shaped ones and the best others.
+    """
     from shaper.figures import comparison_figure, save
 
     job = comparison.job
+    names = list(comparison.pulses)
+    if len(names) > _MOST_DRAWN:
+        names = _worth_a_map(comparison)
+    table = cuts(comparison)
+    table["pulses"] = {name: table["pulses"][name] for name in names}
     figure = comparison_figure(
-        {name: waveform_table(pulse) for name, pulse in comparison.pulses.items()},
-        cuts(comparison),
+        {name: waveform_table(comparison.pulses[name]) for name in names},
+        table,
         rabi_max_MHz=job.rabi_max / MHZ,
-        amplitude_tolerance=job.amplitude_tolerance,
-        detuning_tolerance_MHz=job.detuning_tolerance / MHZ,
+        **_box_in_MHz(job),
         title=job.title,
     )
     save(figure, path)
+
+
+def draw_maps(comparison: Comparison, path: str | Path) -> None:
+    """The maps side by side on one scale as a picture."""
+    from shaper.figures import map_figure, save
+
+    save(map_figure(maps(comparison), **_box_in_MHz(comparison.job)), path)
+
+
+def _box_in_MHz(job: Job) -> dict[str, float]:
+    return {
+        "amplitude_tolerance": job.amplitude_tolerance,
+        "detuning_tolerance_MHz": job.detuning_tolerance / MHZ,
+    }
