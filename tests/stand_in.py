@@ -110,6 +110,7 @@ class Generator:
     faults: list[Fault] = field(default_factory=list)
     log: list[str] = field(default_factory=list)  # every message executed, blocks as <n bytes>
     switched_on: list[str] = field(default_factory=list)  # every command that switched one on
+    told: dict[int, bool] = field(default_factory=dict)  # last answer to OUTPut?
     stored_while_on: int = 0
     messages: int = 0
 
@@ -250,7 +251,9 @@ class Generator:
         self.on[n] = state
 
     def output_query(self, match, values):
-        return b"%d" % self.on[self._output(match)]
+        n = self._output(match)
+        self.told[n] = self.on[n]
+        return b"%d" % self.on[n]
 
     def set_format(self, match, values):
         kind = one(values[:1]).upper()
@@ -549,17 +552,22 @@ class Session:
         filled = min(len(data), len(self.ahead) - digits)
         view[:filled] = self.ahead[digits : digits + filled]
         self.ahead = self.ahead[digits + filled :]
+        await self.mid_block(filled, data)
         while filled < len(data):
-            if filled >= len(data) // 2:
-                if self.generator.strikes("close_mid_block"):
-                    raise Closed
-                if self.generator.strikes("stall_mid_block"):
-                    await self.until_closed()
             got = await self.loop.sock_recv_into(self.link, view[filled:])
             if not got:
                 raise Closed
             filled += got
+            await self.mid_block(filled, data)
         return data
+
+    async def mid_block(self, filled: int, data: bytearray):
+        """Faults that strike when half of a block has come."""
+        if filled >= len(data) // 2:
+            if self.generator.strikes("close_mid_block"):
+                raise Closed
+            if self.generator.strikes("stall_mid_block"):
+                await self.until_closed()
 
     async def until_closed(self):
         """Neither read nor write until the other side gives up (seen by looking, not reading)."""

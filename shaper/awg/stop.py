@@ -24,12 +24,13 @@ class Session:
         connect: opens a link.
         instrument: on the present link; None without one.
         stranger: True once it has answered as another instrument than the profile's.
+        reachable: whether it answered when it was last told to switch off.
     """
 
     def __init__(self, connect: Callable[[], Link], profile: Profile, record: LoadRecord):
         self.connect, self.profile, self.record = connect, profile, record
         self.instrument: Instrument | None = None
-        self.stranger = False
+        self.stranger = self.reachable = False
 
     def open(self) -> Instrument:
         """A fresh link; the old one is given up first."""
@@ -63,16 +64,16 @@ def make_safe(session: Session, remove: list[str]) -> str:
     """
     record = session.record
     record.tolerant = True  # a full disk must not keep an output on
+    left = list(remove)
     if session.stranger:
         confirmed, statement = False, _look_only(session)
     else:
         confirmed, statement = _switch_off(session)
-    left = list(remove)
-    if not session.stranger and session.instrument is not None:
-        left = _tidy(session, remove)
-        again, later = _switch_off(session)  # the last word: what they are when we leave
-        if again or not confirmed or "ON" in later:
-            confirmed, statement = again, later
+        if session.reachable:
+            left = _tidy(session, remove)
+            again, later = _switch_off(session)  # the last word: what they are when we leave
+            if session.reachable:
+                confirmed, statement = again, later
     for name in remove:
         record.trace(name, "left" if name in left else "removed")
     record.put(output={"confirmed_off": confirmed, "statement": statement})
@@ -84,10 +85,12 @@ def _switch_off(session: Session) -> tuple[bool, str]:
     outputs = " and ".join(str(n) for n in session.profile.outputs.numbers)
     statement = f"output {outputs}: OFF could NOT be sent; {BY_HAND}"
     for _ in range(ATTEMPTS):
+        session.reachable = False
         try:
             instrument = session.usable()
             statement = f"output {outputs}: OFF was sent but NOT confirmed; {BY_HAND}"
             on = [str(n) for n, state in instrument.switch_off().items() if state]
+            session.reachable = True
             if not on:
                 return True, f"output {outputs}: off, confirmed by the instrument"
             statement = f"output {' and '.join(on)}: STILL ON after OFF was sent; {BY_HAND}"
