@@ -1,6 +1,7 @@
 """The guaranteed worst case: never below any sample, and close to the largest."""
 
 import math
+from pathlib import Path
 
 import mpmath
 import numpy as np
@@ -14,8 +15,10 @@ from shaper.evidence.proof import _Search, prove, prove_pulse
 from shaper.job import parse_job
 from shaper.physics.propagate import propagate
 from shaper.pulse import make_pulse
-from shaper.target import Target
+from shaper.store import load_waveform
+from shaper.target import Target, infidelity
 
+ROBUST = Path(__file__).parent / "data" / "robust_z90.h5"
 RABI_MAX = 2 * math.pi * 25e6  # rad/s, the Alder bench
 SAMPLES = 100_000  # random points of the box, per pulse
 # the samples are floats themselves; the smallest worst case here is some 1e-9
@@ -134,6 +137,26 @@ def test_spiky_pulses(seed):
     proof = prove(*case)
     assert proof.boxes > 20
     assert largest_of_random_points(rng, *case) <= proof.guaranteed <= 1.01 * proof.sampled
+
+
+def test_robust_pulse_from_a_file(rng):
+    """A stored z(90), 8 pi / W_max long, made on a grid of 5 x 7 errors, over its whole box.
+
+    Between the points of that grid it is worse by a fifth; the proof knows.
+    """
+    waveform = load_waveform(ROBUST)
+    job, pulse = parse_job(waveform.job_text), waveform.pulses["shaped"]
+    box = (job.target, job.amplitude_tolerance, job.detuning_tolerance)
+    proof = prove_pulse(pulse, job)
+    assert largest_of_random_points(rng, *pulse.played, *box) <= proof.guaranteed < 2e-6
+    assert proof.guaranteed <= 1.01 * proof.sampled
+    assert proof.guaranteed == pytest.approx(waveform.scores["shaped"].guaranteed, rel=1e-6)
+    eps, delta = np.meshgrid(
+        job.amplitude_tolerance * polynomial.samples(4),
+        job.detuning_tolerance * polynomial.samples(6),
+    )
+    on_grid = infidelity(propagate(*pulse.played, eps, delta), job.target)
+    assert np.max(on_grid) < 0.9 * proof.sampled
 
 
 # ---- against closed forms

@@ -83,7 +83,10 @@ class Proof:
 
 
 def prove_pulse(pulse: Pulse, job: Job, tolerance: float = 0.01) -> Proof:
-    """The proof for a pulse, as its DAC codes play it, over the tolerance box of a job."""
+    """The proof for a pulse, as its DAC codes play it, over the tolerance box of a job.
+
+    It speaks of the ideal two-level qubit: neither leakage nor decay is in it.
+    """
     return prove(
         *pulse.played,
         job.target,
