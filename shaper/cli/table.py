@@ -15,15 +15,15 @@ def plain(value: float | None, digits: int = 4) -> str:
     return "-" if value is None or math.isnan(value) else f"{value:.{digits}g}"
 
 
-def aligned(header: list[str], rows: list[list[str]]) -> str:
-    """First column to the left, the others to the right, a rule below the header."""
+def aligned(header: list[str], rows: list[list[str]], text_columns: tuple[int, ...] = (0,)) -> str:
+    """Text columns to the left, numbers to the right, a rule below the header."""
     widths = [max(len(line[k]) for line in [header, *rows]) for k in range(len(header))]
 
     def line(cells: list[str]) -> str:
-        first, *others = (
-            cell.ljust(w) if k == 0 else cell.rjust(w)
-            for k, (cell, w) in enumerate(zip(cells, widths, strict=True))
+        placed = (
+            cell.ljust(width) if k in text_columns else cell.rjust(width)
+            for k, (cell, width) in enumerate(zip(cells, widths, strict=True))
         )
-        return "  ".join([first, *others]).rstrip()
+        return "  ".join(placed).rstrip()
 
     return "\n".join([line(header), "-" * (sum(widths) + 2 * len(widths) - 2), *map(line, rows)])
