@@ -14,7 +14,7 @@ import sys
 from shaper import __version__
 from shaper.errors import ShaperError
 
-COMMANDS = ("new", "check", "optimize", "compare", "load")
+COMMANDS = ("new", "check", "optimize", "compose", "compare", "report", "load")
 INTERRUPTED = 130
 
 

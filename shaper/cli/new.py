@@ -26,22 +26,34 @@ def add(commands):
     )
     command.add_argument("job", metavar="JOB.toml", help="the file to write")
     command.add_argument("--gate", choices=GATES, help="what the pulse must do")
-    command.add_argument("--angle-deg", type=float, help="rotation angle, for x, y, z")
-    command.add_argument("--rabi-max-MHz", type=float, help="largest Rabi frequency, W_max/2pi")
+    command.add_argument(
+        "--angle-deg", metavar="DEGREES", type=float, help="rotation angle, for x, y, z"
+    )
+    command.add_argument(
+        "--rabi-max-MHz", metavar="MHZ", type=float, help="largest Rabi frequency, W_max/2pi"
+    )
     command.add_argument(
         "--bound",
         choices=("circle", "box"),
         help="circle: one I/Q line (default); box: two independent lines",
     )
-    command.add_argument("--sample-rate-MSps", type=float, help="of the DAC (default 1000)")
     command.add_argument(
-        "--amplitude", type=float, help="relative amplitude error to withstand, +- (default 0)"
+        "--sample-rate-MSps", metavar="RATE", type=float, help="of the DAC (default 1000)"
     )
     command.add_argument(
-        "--detuning-MHz", type=float, help="drift of the resonance to withstand, +- (default 0)"
+        "--amplitude",
+        metavar="FRACTION",
+        type=float,
+        help="relative amplitude error to withstand, +- (default 0)",
     )
-    command.add_argument("--duration-ns", type=float, help="(default: proposed)")
-    command.add_argument("--title", help="free text")
+    command.add_argument(
+        "--detuning-MHz",
+        metavar="MHZ",
+        type=float,
+        help="drift of the resonance to withstand, +- (default 0)",
+    )
+    command.add_argument("--duration-ns", metavar="NS", type=float, help="(default: proposed)")
+    command.add_argument("--title", metavar="TEXT", help="free text")
     command.add_argument("--replace", action="store_true", help="write over an existing file")
     return command
 

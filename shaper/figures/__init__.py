@@ -10,6 +10,8 @@ from shaper.figures.maps import map_figure as map_figure
 from shaper.figures.spectrum import spectrum_figure as spectrum_figure
 from shaper.figures.style import DARK as DARK
 from shaper.figures.style import LIGHT as LIGHT
+from shaper.figures.style import Theme as Theme
 from shaper.figures.style import encoded as encoded
 from shaper.figures.style import save as save
+from shaper.figures.style import scientific as scientific
 from shaper.figures.waveform import waveform_figure as waveform_figure

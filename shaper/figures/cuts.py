@@ -8,6 +8,7 @@ import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
+from matplotlib.ticker import MaxNLocator
 
 from shaper.figures import style
 
@@ -96,5 +97,6 @@ def draw_cuts(
             )
         style.log_infidelity_axis(ax, max(lowest, LOWEST_SHOWN), highest)
         ax.set_xlim(x[0], x[-1])
+        ax.xaxis.set_major_locator(MaxNLocator(5))
         ax.set_xlabel(label)
         ax.set_ylabel("Average gate infidelity")

@@ -84,6 +84,7 @@ def map_figure(
     bar = figure.colorbar(mesh, ax=panels, extend="both", aspect=28, pad=0.02)
     bar.set_label("Average gate infidelity")
     bar.ax.minorticks_off()
+    bar.ax.yaxis.set_major_formatter(style.decade)
     bar.outline.set_visible(False)
     for level in CONTOURS:  # the bar is the key to the contours
         bar.ax.axhline(level, color=_SHADES[level], linestyle=_DASHES[level], linewidth=1.2)

@@ -10,6 +10,7 @@ from __future__ import annotations
 
 import contextlib
 import functools
+import math
 import os
 import tempfile
 from collections.abc import Callable, Sequence
@@ -134,7 +135,6 @@ def _settings(theme: Theme) -> dict:
         "axes.spines.top": False,
         "axes.spines.right": False,
         "axes.unicode_minus": True,
-        "axes.formatter.use_mathtext": True,
         "axes.grid": False,
         "figure.facecolor": theme.paper,
         "savefig.facecolor": theme.paper,
@@ -169,7 +169,7 @@ def drawn(make: Callable[..., Figure]) -> Callable[..., Figure]:
         with _styled(theme):
             figure = make(*args, theme=theme, **kwargs)
             FigureCanvasAgg(figure)
-            figure.canvas.draw()  # fixes text and layout while the style holds
+            figure.draw_without_rendering()  # fixes text and layout while the style holds
             figure.set_layout_engine("none")  # laid out once: every saving gives the same bytes
             return figure
 
@@ -231,9 +231,15 @@ def log_infidelity_axis(ax: Axes, lowest: float, highest: float, axis: str = "y"
     side = getattr(ax, f"{axis}axis")
     side.set_major_locator(LogLocator(numticks=7))
     side.set_minor_locator(LogLocator(subs=(1.0,), numticks=99))  # every decade, unlabeled
+    side.set_major_formatter(decade)
     side.set_minor_formatter(NullFormatter())
     ax.grid(axis=axis, which="major")
     ax.set_axisbelow(True)
+
+
+def decade(value: float, _position: int | None = None) -> str:
+    """A whole power of ten as a tick label: 1e-4 as 10⁻⁴. Plain characters: no math to set."""
+    return "10" + str(round(math.log10(value))).translate(_SUPERSCRIPT)
 
 
 def positive(values: Sequence[float]) -> np.ndarray:

@@ -1,0 +1,47 @@
+"""``shaper report``: one self-contained page about a waveform file."""
+
+from __future__ import annotations
+
+import argparse
+import sys
+
+_EXAMPLE = """example:
+  shaper report results/z90.h5                  writes results/z90.html
+  shaper report results/z90.h5 --output -       prints the page"""
+
+
+def add(commands):
+    """Declare the command's arguments."""
+    command = commands.add_parser(
+        "report",
+        help="write one HTML page about a waveform file: verdict, table, figures, live panel",
+        description="Write a self-contained HTML page: verdict, table, figures, a live panel "
+        "with sliders for the errors, cautions, provenance and the job. It opens from disk and "
+        "asks the network for nothing.",
+        epilog=_EXAMPLE,
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    command.add_argument("file", metavar="FILE.h5", help="waveform file")
+    command.add_argument(
+        "--output", metavar="FILE.html", help="where to write (default: FILE.html)"
+    )
+    return command
+
+
+def run(args) -> int:
+    """Write the page; returns the exit code."""
+    from pathlib import Path
+
+    from shaper.store import load_waveform
+    from shaper.store.atomic import replace_file
+    from shaper.workflow.report import make_report
+
+    source = Path(args.file)
+    page = make_report(load_waveform(source), source.name)
+    if args.output == "-":
+        sys.stdout.write(page)
+        return 0
+    output = Path(args.output) if args.output else source.with_suffix(".html")
+    replace_file(output, page.encode("utf-8"))
+    print(output)
+    return 0

@@ -1,0 +1,52 @@
+"""Small pieces of HTML that page and notebook share."""
+
+from __future__ import annotations
+
+import base64
+from collections.abc import Mapping, Sequence
+from html import escape
+
+COLUMNS = (
+    ("duration_ns", "duration (ns)", ".6g"),
+    ("duration_over_shortest", "times the shortest", ".4g"),
+    ("peak_MHz", "peak Rabi (MHz)", ".4g"),
+    ("rms_MHz", "rms Rabi (MHz)", ".4g"),
+    ("infidelity", "infidelity, nominal", ".2e"),
+    ("infidelity_mean", "mean over the box", ".2e"),
+    ("infidelity_worst", "worst over the box", ".2e"),
+    ("infidelity_guaranteed", "guaranteed worst", ".2e"),
+)
+
+
+def pulse_table(rows: Sequence[Mapping]) -> str:
+    """One row a pulse, keys as in ``workflow.compare.as_json``; columns without a value are left
+    out.
+    """
+    shown = [column for column in COLUMNS if any(row.get(column[0]) is not None for row in rows)]
+    head = "".join(f'<th scope="col">{escape(label)}</th>' for _, label, _ in shown)
+    body = "".join(
+        f'<tr><th scope="row">{escape(row["name"])}</th>'
+        + "".join(f"<td>{number(row.get(key), form)}</td>" for key, _, form in shown)
+        + "</tr>"
+        for row in rows
+    )
+    return (
+        f'<table><thead><tr><th scope="col">pulse</th>{head}</tr></thead>'
+        f"<tbody>{body}</tbody></table>"
+    )
+
+
+def number(value: float | None, form: str) -> str:
+    """A number as people write it: 2.4 times a power of ten, a true minus, a dash for none."""
+    if value is None:
+        return "–"
+    text = f"{value:{form}}"
+    if "e" in text:
+        digits, power = text.split("e")
+        return f"{digits}&#8239;×&#8239;10<sup>{int(power)}</sup>".replace("-", "−")
+    return text.replace("-", "−")
+
+
+def picture_source(svg: bytes) -> str:
+    """An SVG file as the address of an image."""
+    return "data:image/svg+xml;base64," + base64.b64encode(svg).decode("ascii")
