@@ -33,9 +33,10 @@ def load_waveform(path: str | os.PathLike) -> Waveform:
     bound of the job in the file. What a later program adds is ignored. The file is read once, as
     a whole, so it cannot change between the check and the use. Nothing in it is ever executed.
 
-    The limit: a file made to break the HDF5 library itself could end the process, which no check
-    from here can prevent. None of 2,500 files with up to 20 random bytes changed did, but a file
-    from a stranger is best read in a process of its own.
+    The limit: a file that breaks the HDF5 library itself ends the process, which no check from
+    here can prevent (measured: 3 of 12,000 files with up to 20 random bytes changed; the others
+    were refused, or read where the change was harmless). Read files from strangers in a process
+    of their own.
 
     Raises:
         FileError: one line: file, place in it, what was expected, what came.
