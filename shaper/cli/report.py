@@ -25,6 +25,13 @@ def add(commands):
     command.add_argument(
         "--output", metavar="FILE.html", help="where to write (default: FILE.html)"
     )
+    command.add_argument(
+        "--against",
+        metavar="NAME",
+        nargs="+",
+        default=[],
+        help="composite pulses of the library to set beside them: names, or all",
+    )
     return command
 
 
@@ -37,7 +44,7 @@ def run(args) -> int:
     from shaper.workflow.report import make_report
 
     source = Path(args.file)
-    page = make_report(load_waveform(source), source.name)
+    page = make_report(load_waveform(source), source.name, args.against)
     if args.output == "-":
         sys.stdout.write(page)
         return 0

@@ -82,7 +82,7 @@ def disc_figure(
             markeredgewidth=1.6,
         )
     )
-    style.legend_above(figure, handles, columns=5)
+    style.legend_above(figure, handles)
     return figure
 
 

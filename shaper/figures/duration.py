@@ -75,5 +75,5 @@ def duration_figure(
     ax.set_xlim(0, 1.04 * longest * factor)
     ax.set_xlabel(f"Duration ({unit})")
     ax.set_ylabel("Average gate infidelity")
-    style.legend_above(figure, handles, columns=3)
+    style.legend_above(figure, handles)
     return figure

@@ -48,5 +48,5 @@ def history_figure(
     ax.xaxis.set_major_locator(MaxNLocator(integer=True))
     ax.set_xlabel("Iteration")
     ax.set_ylabel("Average gate infidelity")
-    style.legend_above(figure, handles, columns=3)
+    style.legend_above(figure, handles)
     return figure

@@ -31,6 +31,8 @@ from shaper.errors import InputError
 SUFFIXES = (".svg", ".pdf", ".png")
 PAGE_WIDTH = 7.2  # inches: the text width of a page
 _PNG_DPI = 200
+_LEGEND_HANDLE = 0.65  # inches a legend entry takes beside its text
+_LEGEND_LETTER = 0.072  # inches a letter
 
 
 @dataclass(frozen=True)
@@ -181,12 +183,14 @@ def sheet(height: float, width: float = PAGE_WIDTH) -> Figure:
     return Figure(figsize=(width, height), layout="constrained")
 
 
-def legend_above(figure: Figure, handles: list, columns: int = 4, title: str = "") -> None:
-    """Heading and one legend for the whole figure, in rows above the panels."""
+def legend_above(figure: Figure, handles: list, title: str = "") -> None:
+    """Heading and one legend for the whole figure, in as many columns as fit above the panels."""
+    longest = max(len(handle.get_label()) for handle in handles)
+    columns = int((figure.get_figwidth() - 0.2) / (_LEGEND_HANDLE + _LEGEND_LETTER * longest))
     figure.legend(
         handles=handles,
         loc="outside upper left",
-        ncols=min(columns, len(handles)),
+        ncols=max(1, min(columns, len(handles))),
         title=title or None,
         alignment="left",
         title_fontproperties={"weight": "bold", "size": 9.5},

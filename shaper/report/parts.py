@@ -15,6 +15,7 @@ COLUMNS = (
     ("infidelity_mean", "mean over the box", ".2e"),
     ("infidelity_worst", "worst over the box", ".2e"),
     ("infidelity_guaranteed", "guaranteed worst", ".2e"),
+    ("infidelity_worst_with_decay", "worst with T1, T2", ".2e"),
 )
 
 

@@ -196,11 +196,18 @@ def verdict_json(verdict: Verdict, job: Job) -> dict:
 
 
 def draw(comparison: Comparison, path: str | Path) -> None:
-    """Waveforms and cuts as a picture; the file's suffix decides the format.
+    """Waveforms and cuts as a picture; the file's suffix decides the format."""
+    from shaper.figures import save
+
+    save(picture(comparison), path)
+
+
+def picture(comparison: Comparison):
+    """Waveforms and cuts as a matplotlib figure.
 
     Six pulses at most, the shaped ones and the best others.
     """
-    from shaper.figures import comparison_figure, save
+    from shaper.figures import comparison_figure
 
     job = comparison.job
     names = list(comparison.pulses)
@@ -208,14 +215,13 @@ def draw(comparison: Comparison, path: str | Path) -> None:
         names = _worth_a_map(comparison)
     table = cuts(comparison)
     table["pulses"] = {name: table["pulses"][name] for name in names}
-    figure = comparison_figure(
+    return comparison_figure(
         {name: waveform_table(comparison.pulses[name]) for name in names},
         table,
         rabi_max_MHz=job.rabi_max / MHZ,
         **_box_in_MHz(job),
         title=job.title,
     )
-    save(figure, path)
 
 
 def draw_maps(comparison: Comparison, path: str | Path) -> None:

@@ -8,8 +8,9 @@ from __future__ import annotations
 
 from html import escape
 
+from shaper.evidence.verdict import sentence
 from shaper.pulse import Waveform
-from shaper.workflow.compare import Comparison, as_json, compare, cuts
+from shaper.workflow.compare import Comparison, as_json, compare, picture
 
 
 def attach() -> None:
@@ -29,24 +30,16 @@ def waveform_html(waveform: Waveform) -> str:
 
 
 def comparison_html(comparison: Comparison) -> str:
-    """The table of all pulses, waveforms and cuts."""
-    from shaper import figures  # matplotlib: only when something is shown
-    from shaper.evidence.tables import waveform_table
+    """Verdict, the table of all pulses, waveforms and cuts."""
+    from shaper.figures import encoded  # matplotlib: only when something is shown
     from shaper.report.parts import picture_source, pulse_table
-    from shaper.units import MHZ
 
     job = comparison.job
-    figure = figures.comparison_figure(
-        {name: waveform_table(pulse) for name, pulse in comparison.pulses.items()},
-        cuts(comparison),
-        rabi_max_MHz=job.rabi_max / MHZ,
-        amplitude_tolerance=job.amplitude_tolerance,
-        detuning_tolerance_MHz=job.detuning_tolerance / MHZ,
-    )
-    source = picture_source(figures.encoded(figure, ".svg"))
+    source = picture_source(encoded(picture(comparison), ".svg"))
     names = ", ".join(comparison.pulses)
     return (
         f"<p><strong>{escape(job.title or job.target_name)}</strong></p>"
+        + f"<p>{escape(sentence(comparison.verdict, job))}</p>"
         + pulse_table(as_json(comparison)["pulses"])
         + f'<img src="{source}" alt="Waveforms and infidelity cuts of {escape(names)}">'
     )

@@ -2,18 +2,19 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 
 import numpy as np
 
 from shaper import figures
 from shaper.drive.dac import largest_code
 from shaper.evidence import tables
+from shaper.evidence.verdict import sentence
 from shaper.pulse import Pulse, Table, Waveform
 from shaper.report import Picture, Report, report_page
-from shaper.units import DEG, MHZ, NS
+from shaper.units import DEG, MHZ
 from shaper.workflow.check import check_job
-from shaper.workflow.compare import Comparison, as_json, compare, cuts
+from shaper.workflow.compare import Comparison, as_json, compare, cuts, maps
 
 STARTS = {
     "|+⟩": (1.0, 0.0, 0.0),
@@ -21,13 +22,10 @@ STARTS = {
     "|1⟩": (0.0, 0.0, -1.0),
     "|+i⟩": (0.0, 1.0, 0.0),
 }
-_MAP_POINTS = 61
-_MAP_REACH = 2.0  # tolerances to either side
-_MAP_DEFAULT = 0.1  # of the drive, where there is no tolerance
-_MOST_MAPS = 6  # beyond that a picture becomes a wall
 _SPECTRUM_POINTS = 1201
 _SPECTRUM_REACH = 12  # Rabi frequencies to either side
 _SLIDER_REACH = 5  # tolerances
+_SLIDER_DEFAULT = 0.1  # of the drive, where there is no tolerance
 _CAUTIONS = (
     "Look at the waveform on an oscilloscope before it reaches a sample. Nothing here switches an "
     "output on; that is for the person at the bench.",
@@ -37,23 +35,24 @@ _CAUTIONS = (
 )
 
 
-def make_report(waveform: Waveform, name: str = "") -> str:
+def make_report(waveform: Waveform, name: str = "", against: Sequence[str] = ()) -> str:
     """The report of a waveform file as one HTML page.
 
     Args:
         waveform: as ``shaper.load_waveform`` gives it.
         name: of the file, for the heading where the job has no title.
+        against: names of the composite library to set beside the file's own pulses, or "all".
     Raises:
         InputError: if the job that the file carries is not valid.
     """
-    comparison = compare(waveform)
+    comparison = compare(waveform, against)
     job = comparison.job
     numbers = as_json(comparison)
     facts = check_job(job)
     return report_page(
         Report(
             title=job.title or name or "Untitled job",
-            verdict=verdict(comparison),
+            verdict=sentence(comparison.verdict, job),
             rows=numbers["pulses"],
             facts=_facts(comparison, facts),
             pictures=_pictures(waveform, comparison),
@@ -68,31 +67,6 @@ def make_report(waveform: Waveform, name: str = "") -> str:
             },
         )
     )
-
-
-def verdict(comparison: Comparison) -> str:
-    """One sentence: what the first pulse gains or loses against the best of the others."""
-    first, *others = comparison.rows
-    over_box = comparison.job.has_tolerance
-    kind = "worst-case infidelity over the tolerance box" if over_box else "infidelity"
-
-    def figure(row):
-        return row.worst if over_box else row.nominal
-
-    reached = figures.scientific(figure(first))
-    said = f"{first.name} reaches {reached} {kind} in {first.duration / NS:.4g} ns"
-    if not others:
-        return said + "."
-    best = min(others, key=figure)
-    ours, theirs = figure(first), figure(best)
-    if min(ours, theirs) > 0:
-        ratio = theirs / ours
-        lower = ratio >= 1
-        how = f"{ratio if lower else 1 / ratio:.3g} times {'lower' if lower else 'higher'} than"
-    else:
-        how = "no better than" if ours > 0 else "without error, compared with"
-    time = first.duration / best.duration
-    return f"{said}: {how} {best.name}, which takes {best.duration / NS:.4g} ns ({1 / time:.3g} times as long)."
 
 
 def _facts(comparison: Comparison, facts: dict) -> dict[str, str]:
@@ -130,8 +104,8 @@ def live_data(comparison: Comparison) -> dict:
     target = job.target
     angle = target.z_angle if target.kind == "gate" and target.free_axis is None else None
     unit, unit_name = (MHZ, "MHz") if job.rabi_max >= MHZ else (MHZ / 1e3, "kHz")
-    percent = _slider(100 * (_SLIDER_REACH * job.amplitude_tolerance or _MAP_DEFAULT))
-    reach = _SLIDER_REACH * job.detuning_tolerance or _MAP_DEFAULT * job.rabi_max
+    percent = _slider(100 * (_SLIDER_REACH * job.amplitude_tolerance or _SLIDER_DEFAULT))
+    reach = _SLIDER_REACH * job.detuning_tolerance or _SLIDER_DEFAULT * job.rabi_max
     has_sandwich = "sandwich" in comparison.pulses
     degrees = None if angle is None else float(f"{angle / DEG:.9g}")
     return tables.plain(
@@ -191,22 +165,17 @@ def _pictures(waveform: Waveform, comparison: Comparison) -> list[Picture]:
         "detuning_tolerance_MHz": job.detuning_tolerance / MHZ,
     }
     waveforms = {name: tables.waveform_table(pulse) for name, pulse in both.items()}
-    side = np.linspace(-1, 1, _MAP_POINTS)
-    shown = dict(list(pulses.items())[:_MOST_MAPS])
-    maps = tables.map_table(
-        shown,
-        job.target,
-        (_MAP_REACH * job.amplitude_tolerance or _MAP_DEFAULT) * side,
-        (_MAP_REACH * job.detuning_tolerance or _MAP_DEFAULT * job.rabi_max) * side,
-        job.detuning,
-    )
+    plane = maps(comparison)
+    shown = list(plane["infidelity"])  # of many pulses the ones worth a picture
+    lines = cuts(comparison)
+    lines["pulses"] = {name: lines["pulses"][name] for name in shown}
     frequency = np.linspace(-1, 1, _SPECTRUM_POINTS) * _SPECTRUM_REACH * job.rabi_max
     spectrum = tables.spectrum_table(both, frequency)
     marks = {}
     if job.anharmonicity and abs(job.anharmonicity) < frequency[-1]:
         marks["second transition"] = job.anharmonicity / MHZ
     paths = tables.path_table(both, {k: STARTS[k] for k in ("|0⟩", "|+⟩")}, 0.0, job.detuning)
-    listed = ", ".join(names)
+    listed = ", ".join(shown)
     pictures = [
         _drawn(
             "Waveform",
@@ -221,13 +190,13 @@ def _pictures(waveform: Waveform, comparison: Comparison) -> list[Picture]:
             "Infidelity when only one error is on; shaded: the tolerance of the job.",
             f"Infidelity against detuning and against amplitude error of {listed}; "
             "the figures at the edge of the tolerance are in the table above as the worst case.",
-            lambda theme: figures.cuts_figure(cuts(comparison), **box, theme=theme),
+            lambda theme: figures.cuts_figure(lines, **box, theme=theme),
         ),
         _drawn(
             "Over both errors",
             "Dark is good. Lines at 1e-3 (solid), 1e-4 (dashed), 1e-5 (dotted).",
-            f"Maps of the infidelity over amplitude error and detuning of {', '.join(shown)}.",
-            lambda theme: figures.map_figure(maps, **box, theme=theme),
+            f"Maps of the infidelity over amplitude error and detuning of {listed}.",
+            lambda theme: figures.map_figure(plane, **box, theme=theme),
         ),
         _drawn(
             "Spectrum",
