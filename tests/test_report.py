@@ -11,13 +11,13 @@ import pytest
 from report_case import make_case
 
 from shaper.cli import main
-from shaper.evidence.verdict import sentence
 from shaper.figures import DARK, LIGHT
 from shaper.job import parse_job
 from shaper.physics.propagate import propagate
+from shaper.report.parts import typeset
 from shaper.store import save_waveform
 from shaper.target import infidelity
-from shaper.workflow.compare import compare
+from shaper.workflow.compare import as_json, compare
 from shaper.workflow.notebook import attach, comparison_html, waveform_html
 from shaper.workflow.report import live_data, make_report
 
@@ -171,9 +171,17 @@ def test_a_file_with_one_pulse_and_no_history_has_a_page():
 
 def test_the_verdict_stands_first(page):
     comparison = compare(make_case())
-    said = sentence(comparison.verdict, comparison.job)
+    said = as_json(comparison)["verdict"]["sentence"]
     text = Page(page).text
-    assert text.index(said) < text.index("All pulses on one grid")
+    subject = said.split(" ")[0]
+    assert text.index(f"{subject} wins") < text.index("All pulses on one grid")
+
+
+def test_numbers_are_set_as_people_write_them():
+    assert typeset("8.16e-04 = +-2 % <b>, 45 us") == (
+        "8.16&#8239;×&#8239;10<sup>−4</sup> = ±2 % &lt;b&gt;, 45 µs"
+    )
+    assert typeset("1.5e+03 usual") == "1.5&#8239;×&#8239;10<sup>3</sup> usual"
 
 
 def test_composites_of_the_library_can_stand_beside(without_pictures):

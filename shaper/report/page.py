@@ -12,8 +12,9 @@ from html import escape
 from importlib.resources import files
 
 from shaper.figures.style import DARK, LIGHT, Theme
-from shaper.report.parts import picture_source, pulse_table
+from shaper.report.parts import picture_source, pulse_table, typeset
 
+_FEW = 6  # pulses whose sources are shown at once
 _PIXELS_PER_POINT = 1.6  # on screen: text of a figure as large as the captions
 
 
@@ -92,7 +93,7 @@ def report_page(report: Report) -> str:
 <header>
 <p class="kind">Waveform report</p>
 <h1>{escape(report.title)}</h1>
-<p class="verdict">{escape(report.verdict)}</p>
+{_verdict(report.verdict)}
 </header>
 <main>
 {_table(report)}
@@ -116,6 +117,13 @@ def report_page(report: Report) -> str:
 </body>
 </html>
 """
+
+
+def _verdict(text: str) -> str:
+    """The sentence; what follows its first semicolon is set smaller, the answer stands out."""
+    answer, semicolon, rest = text.partition("; ")
+    small = f'<span class="rest">; {typeset(rest)}</span>' if semicolon else ""
+    return f'<p class="verdict">{typeset(answer)}{small}</p>'
 
 
 def _own(name: str) -> str:
@@ -165,7 +173,8 @@ def _table(report: Report) -> str:
 </div>
 <p class="note">Average gate infidelity, recomputed from the DAC codes; the box is the tolerance of
 the job.</p>
-<ul class="note sources">{sources}</ul>
+<details class="note"{" open" if len(report.rows) <= _FEW else ""}><summary>Sources</summary>
+<ul class="sources">{sources}</ul></details>
 </section>"""
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import base64
+import re
 from collections.abc import Mapping, Sequence
 from html import escape
 
@@ -46,6 +47,17 @@ def number(value: float | None, form: str) -> str:
         digits, power = text.split("e")
         return f"{digits}&#8239;×&#8239;10<sup>{int(power)}</sup>".replace("-", "−")
     return text.replace("-", "−")
+
+
+def typeset(text: str) -> str:
+    """Text of ours as HTML: powers of ten, plus-minus and micro as people write them."""
+    text = escape(text).replace("+-", "±")
+    text = re.sub(r"(?<=[0-9] )us\b", "µs", text)
+    return re.sub(
+        r"([0-9.]+)e([+-][0-9]+)",
+        lambda found: f"{found[1]}&#8239;×&#8239;10<sup>{int(found[2])}</sup>".replace("-", "−"),
+        text,
+    )
 
 
 def picture_source(svg: bytes) -> str:
