@@ -609,21 +609,30 @@ class Session:
 
 
 async def serve(generator: Generator, listener: socket.socket):
-    """Take links until cancelled."""
+    """Take links until cancelled; none is left open then."""
     loop, tasks = asyncio.get_running_loop(), set()
     listener.setblocking(False)
+
+    def take():
+        try:
+            link, _ = listener.accept()
+        except OSError:  # gone again
+            return
+        link.setblocking(False)
+        link.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
+        if generator.strikes("no_entry"):
+            link.close()
+            return
+        task = loop.create_task(Session(generator, link).run())
+        tasks.add(task)
+        task.add_done_callback(tasks.discard)
+        task.add_done_callback(lambda task: link.close())
+
+    loop.add_reader(listener, take)
     try:
-        while True:
-            link, _ = await loop.sock_accept(listener)
-            link.setblocking(False)
-            link.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
-            if generator.strikes("no_entry"):
-                link.close()
-                continue
-            task = asyncio.create_task(Session(generator, link).run())
-            tasks.add(task)
-            task.add_done_callback(tasks.discard)
+        await asyncio.Event().wait()
     finally:
+        loop.remove_reader(listener)
         for task in list(tasks):
             task.cancel()
         await asyncio.gather(*tasks, return_exceptions=True)

@@ -254,5 +254,5 @@ def test_mutated_answers(chunk):
             assert holds(generator, made)
         else:
             assert generator.traces == {}
-        assert max(link.largest for link in links) <= 4 * made.profile.memory.max_samples
+        assert max(link.largest for link in links) <= made.profile.memory.max_bytes
     assert harmless < MUTATIONS / 8  # most mutations must be noticed

@@ -218,14 +218,14 @@ class Instrument:
         if not _WHOLE.fullmatch(answer.strip()) or int(answer) != 1:
             raise LinkError(f"transfer {name}: expected 1 on completion, got {answer[:80]!r}")
 
-    def fetch(self, name: str, limit: int) -> bytes | bytearray:
-        """Read a trace back, at most ``limit`` bytes."""
+    def fetch(self, name: str, expected: int, limit: int) -> bytes | bytearray:
+        """Read a trace back: in time for ``expected`` bytes, refused beyond ``limit`` bytes."""
         text = self.says.data_query.format(name=name)
         begin, data = time.monotonic(), None
         try:
             self.link.idle()
             self.link.send(text.encode("ascii") + b"\n", self.timeout)
-            data = self.link.read_block(self.profile.link.transfer_seconds(limit), limit)
+            data = self.link.read_block(self.profile.link.transfer_seconds(expected), limit)
         finally:
             self.note(
                 "read back",

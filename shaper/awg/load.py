@@ -205,7 +205,8 @@ def _in_place(instrument: Instrument, taken: list[Trace], record: LoadRecord) ->
     """Those whose read-back is equal already."""
     equal = []
     for trace in taken:
-        if instrument.fetch(trace.name, _limit(instrument.profile)) == trace.data:
+        limit = instrument.profile.memory.max_bytes
+        if instrument.fetch(trace.name, limit, limit) == trace.data:
             record.trace(trace.name, "in place")
             equal.append(trace)
     return equal
@@ -231,16 +232,11 @@ def _one(
     instrument.define(trace.name, trace.points)
     instrument.store(trace.name, trace.data)
     instrument.require_no_error(f"transfer {trace.name}")
-    found = instrument.fetch(trace.name, _limit(instrument.profile))
+    found = instrument.fetch(trace.name, len(trace.data), instrument.profile.memory.max_bytes)
     if found != trace.data:
         raise ReadBackError(f"{trace.name}: {_difference(trace.data, found)}")
     record.line("read back equal", trace=trace.name, data_sha256=trace.data_sha256)
     record.trace(trace.name, "loaded")
-
-
-def _limit(profile: Profile) -> int:
-    """The longest block that any trace can be, bytes."""
-    return 4 * profile.memory.max_samples
 
 
 def _difference(written: bytes, found: bytes | bytearray) -> str:

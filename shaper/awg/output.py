@@ -107,7 +107,7 @@ def _verified(instrument: Instrument, loaded: dict) -> list[Exposure]:
     instrument.formats()
     instrument.require_no_error("formats")
     for trace in loaded["traces"]:
-        data = instrument.fetch(trace["name"], 4 * profile.memory.max_samples)
+        data = instrument.fetch(trace["name"], trace["bytes"], profile.memory.max_bytes)
         if len(data) != trace["bytes"] or sha256(data) != trace["data_sha256"]:
             raise ReadBackError(
                 f"{trace['name']}: the instrument does not hold what was loaded "

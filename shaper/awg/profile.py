@@ -57,6 +57,11 @@ class MemorySection(Section):
     granularity_samples: int = Field(1, ge=1, le=65536)
     max_samples: int = Field(ge=1, le=MAX_BYTES // 4)
 
+    @property
+    def max_bytes(self) -> int:
+        """The longest block that any trace can be."""
+        return 4 * self.max_samples
+
 
 class DataSection(Section):
     """How a sample lies in its word, and the words in the block."""
