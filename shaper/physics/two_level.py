@@ -5,8 +5,8 @@
 
     q = (cos sqrt S, h sinc sqrt S)
 
-and with ``a = sinc(2 sqrt S)``, ``b = sin^2(sqrt S)/S``, ``e = (1 - a)/S`` its derivative and its action
-on vectors are
+and with ``a = sinc(2 sqrt S)``, ``b = sin^2(sqrt S)/S``, ``e = (1 - a)/S`` its derivative and its
+action on vectors are
 
     vec(dq q*) = a dh + e h (h.dh) + b h x dh
     q* v q     = (1 - 2 b S) v - 2 a h x v + 2 b h (h.v)
@@ -15,10 +15,10 @@ All five are entire functions of ``S``: power series without square root or divi
 differentiable with the drive off.
 
 The adjoint stores nothing along the chain. A change of the end point is ``dQ = (0, w) Q``, so the
-cotangent ``l`` of ``Q`` acts only through the vector ``v = vec(l Q*)``. Going back through a slice just
-turns ``v`` by that slice, so the backward pass carries one 3-vector a grid point, and reads off
-``dJ/dh = a v + e h (h.v) - b h x v`` on its way (the reduced adjoint of a left-trivialized chain;
-derived here).
+cotangent ``l`` of ``Q`` acts only through the vector ``v = vec(l Q*)``. Going back through a slice
+just turns ``v`` by that slice, so the backward pass carries one 3-vector a grid point, and reads
+off ``dJ/dh = a v + e h (h.v) - b h x v`` on its way (the reduced adjoint of a left-trivialized
+chain; derived here).
 
 Components are separate arrays with the grid as vector axis. A short grid leaves the vector units
 idle and the loop overhead dominant, so there the chain is cut into equal pieces that are carried
@@ -32,7 +32,6 @@ from functools import partial
 
 import jax
 import jax.numpy as jnp
-import numpy as np
 
 Array = jax.Array
 
@@ -123,6 +122,23 @@ def _join(piece: tuple) -> tuple:
     return total
 
 
+def _step_back(terms: int, v: tuple, hx: Array, hy: Array, hz: Array):
+    """The vector before a slice, and dJ/dhx, dJ/dhy of that slice."""
+    s = hx * hx + hy * hy + hz * hz
+    a, b, e = _turn_series(s, terms)
+    v1, v2, v3 = v
+    p1, p2, p3 = hy * v3 - hz * v2, hz * v1 - hx * v3, hx * v2 - hy * v1
+    d = hx * v1 + hy * v2 + hz * v3
+    gx, gy = a * v1 + e * d * hx - b * p1, a * v2 + e * d * hy - b * p2
+    keep, a2, b2d = 1 - 2 * b * s, 2 * a, 2 * b * d
+    before = (
+        keep * v1 - a2 * p1 + b2d * hx,
+        keep * v2 - a2 * p2 + b2d * hy,
+        keep * v3 - a2 * p3 + b2d * hz,
+    )
+    return before, gx, gy
+
+
 def _turn_back(piece: tuple, v: tuple) -> tuple:
     """q* v q for a unit quaternion and a vector, as component tuples."""
     w, x, y, z = piece
@@ -157,21 +173,8 @@ def _propagate_backward(terms, kept, cotangent):
 
     def step(v, slice_):
         wx, wy, t = (c[:, None] for c in slice_)
-        hx, hy, hz = (t * wx) * scale, (t * wy) * scale, t * delta
-        s = hx * hx + hy * hy + hz * hz
-        a, b, e = _turn_series(s, terms)
-        v1, v2, v3 = v
-        p1, p2, p3 = hy * v3 - hz * v2, hz * v1 - hx * v3, hx * v2 - hy * v1
-        d = hx * v1 + hy * v2 + hz * v3
-        gx = jnp.sum((a * v1 + e * d * hx - b * p1) * scale, axis=1)
-        gy = jnp.sum((a * v2 + e * d * hy - b * p2) * scale, axis=1)
-        keep, a2, b2d = 1 - 2 * b * s, 2 * a, 2 * b * d
-        v = (
-            keep * v1 - a2 * p1 + b2d * hx,
-            keep * v2 - a2 * p2 + b2d * hy,
-            keep * v3 - a2 * p3 + b2d * hz,
-        )
-        return v, (gx, gy)
+        v, gx, gy = _step_back(terms, v, (t * wx) * scale, (t * wy) * scale, t * delta)
+        return v, (jnp.sum(gx * scale, axis=1), jnp.sum(gy * scale, axis=1))
 
     _, (gx, gy) = jax.lax.scan(step, v, (x, y, half), reverse=True)
     none = jnp.zeros_like
@@ -179,6 +182,16 @@ def _propagate_backward(terms, kept, cotangent):
 
 
 _propagate.defvjp(_propagate_forward, _propagate_backward)
+
+
+def _cut(drive: Array, durations: Array, longest_turn: float):
+    """Slices short enough for the series, and its length: (drive, durations, cuts, terms)."""
+    require_float64()
+    cuts = max(1, math.ceil(longest_turn / LONGEST_TURN))
+    if cuts > 1:
+        drive = jnp.repeat(drive, cuts, axis=0)
+        durations = jnp.repeat(durations / cuts, cuts)
+    return drive, durations, cuts, _terms(min(longest_turn / cuts * (1 + 1e-9), LONGEST_TURN))
 
 
 def propagate(
@@ -201,16 +214,41 @@ def propagate(
         Slice: Nielsen and Chuang, Quantum Computation and Quantum Information, exercise 2.35.
         Adjoint: derived in this room.
     """
-    require_float64()
-    cuts = max(1, math.ceil(longest_turn / LONGEST_TURN))
-    if cuts > 1:
-        drive = jnp.repeat(drive, cuts, axis=0)
-        durations = jnp.repeat(durations / cuts, cuts)
+    drive, durations, _, terms = _cut(drive, durations, longest_turn)
     slices, grid = drive.shape[0], eps.shape[0]
     pieces = _pieces(slices, grid)
-    length = slices // pieces
     x, y, half = (  # [length, piece]: the slices of one piece follow each other down a column
-        c.reshape(pieces, length).T for c in (drive[:, 0], drive[:, 1], 0.5 * durations)
+        c.reshape(pieces, slices // pieces).T for c in (drive[:, 0], drive[:, 1], 0.5 * durations)
     )
-    terms = _terms(min(longest_turn / cuts * (1 + 1e-9), LONGEST_TURN))
     return _propagate(terms, x, y, half, 1 + eps, delta)
+
+
+def errors_and_jacobian(
+    drive: Array, durations: Array, eps: Array, delta: Array, rows: Array, longest_turn: float
+) -> tuple[Array, Array]:
+    """The rotation errors ``E q`` and their derivative, point by point, for Gauss-Newton steps.
+
+    The same backward pass as the adjoint, once for each row of ``E``, and not summed over the
+    grid.
+
+    Args:
+        drive, durations, eps, delta, longest_turn: as in ``propagate``.
+        rows: [row, 4, grid] unitless. The linear forms that vanish on the target.
+    Returns:
+        errors [row, grid] unitless and jacobian [slice, 2, row, grid] s/rad.
+    """
+    slices = drive.shape[0]
+    drive, durations, cuts, terms = _cut(drive, durations, longest_turn)
+    x, y, half, scale = drive[:, 0], drive[:, 1], 0.5 * durations, 1 + eps
+    total = _join(_chain(terms, x[:, None], y[:, None], half[:, None], scale, delta))
+    errors = sum(rows[:, i] * total[i] for i in range(4))
+    w, qx, qy, qz = total
+    v = _times(tuple(rows[:, i] for i in range(4)), (w, -qx, -qy, -qz))[1:]  # 3 x [row, grid]
+
+    def step(v, slice_):
+        wx, wy, t = slice_
+        v, gx, gy = _step_back(terms, v, (t * wx) * scale, (t * wy) * scale, t * delta)
+        return v, jnp.stack([gx, gy]) * (t * scale)
+
+    _, jacobian = jax.lax.scan(step, v, (x, y, half), reverse=True)
+    return errors, jnp.sum(jacobian.reshape(slices, cuts, *jacobian.shape[1:]), axis=1)
