@@ -259,6 +259,15 @@ def test_warnings_name_the_key_and_the_remedy(changes, words):
     assert found[0].split(":")[0].split(",")[0].split(".")[0] in JobFile.model_fields
 
 
+@pytest.mark.parametrize(
+    ("bandwidth", "words"),
+    [(10e6, "wider than the line: it needs at least 1/duration = 16.67 MHz"), (60e6, "500 MHz")],
+)
+def test_a_line_too_narrow_is_warned_of(bandwidth, words):
+    assert any(words in w for w in check_job(job_with(), bandwidth)["warnings"])
+    assert not any("line" in w for w in check_job(job_with(), 600e6)["warnings"])
+
+
 def test_box_bound_says_best_known():
     facts = check_job(
         job_with(("rabi_max_MHz", 'bound = "box"\nrabi_max_MHz'), ("60.0\nslice", "20.0\nslice"))
@@ -270,10 +279,13 @@ def test_box_bound_says_best_known():
 def test_check_prints_for_people_and_refuses_nonsense(tmp_path, capsys):
     path = tmp_path / "a.toml"
     path.write_text(GOOD)
-    assert main(["check", str(path)]) == 0
+    assert main(["check", str(path), "--line-MHz", "0"]) == 2
+    assert "--line-MHz: expected a positive number, got 0" in capsys.readouterr().err
+    assert main(["check", str(path), "--line-MHz", "12"]) == 0
     said = capsys.readouterr()
     assert "26.4575 ns (time-optimal, published)" in said.out
     assert "shaper: warning: target: z(90)" in said.err
+    assert "wider than the line" in said.err
     path.write_text(GOOD.replace("duration_ns", "durations_ns"))
     assert main(["check", str(path)]) == 2
     assert "nearest known key: duration_ns" in capsys.readouterr().err

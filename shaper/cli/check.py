@@ -23,6 +23,12 @@ def add(commands):
         formatter_class=argparse.RawDescriptionHelpFormatter,
     )
     command.add_argument("job", metavar="JOB.toml", help="the job file")
+    command.add_argument(
+        "--line-MHz",
+        metavar="MHZ",
+        type=float,
+        help="bandwidth (-3 dB) of the drive line, to warn of pulses wider than it",
+    )
     command.add_argument("--json", action="store_true", help="print one JSON object, nothing else")
     return command
 
@@ -32,10 +38,15 @@ def run(args) -> int:
     import json
 
     from shaper.cli.table import small
+    from shaper.errors import InputError
     from shaper.job import read_job
     from shaper.workflow.check import check_job
 
-    facts = check_job(read_job(args.job))
+    job = read_job(args.job)
+    line = args.line_MHz
+    if line is not None and not line > 0:
+        raise InputError(f"--line-MHz: expected a positive number, got {line:g}")
+    facts = check_job(job, line and line * 1e6)
     if args.json:
         print(json.dumps(facts, indent=2, ensure_ascii=False))
         return 0

@@ -15,9 +15,12 @@ _COARSE_SLICE = math.pi / 2  # a slice that turns further than this can hardly f
 _LEAKY_PERIODS = 2.0  # of the anharmonicity; a pulse shorter than this excites the next level
 
 
-def check_job(job: Job) -> dict:
+def check_job(job: Job, line_bandwidth: float | None = None) -> dict:
     """Derived figures of a job and what speaks against running it.
 
+    Args:
+        line_bandwidth: Hz, -3 dB point of the drive line to either side of the carrier; None if
+            not known.
     Returns:
         A flat dict, unit in each key, None where a figure has no meaning; ``warnings`` is a
         list of sentences, each with its remedy.
@@ -48,7 +51,7 @@ def check_job(job: Job) -> dict:
             coherence_limit(job.duration, job.t1, job.t2) if decays else None
         ),
         "frame_update": frame_update(job),
-        "warnings": _warnings(job, shortest, padded - samples),
+        "warnings": _warnings(job, shortest, padded - samples, line_bandwidth),
     }
     return {
         key: float(f"{value:.12g}") if isinstance(value, float) else value  # 120, not 120.00..01
@@ -69,7 +72,7 @@ def frame_update(job: Job) -> str | None:
     return None
 
 
-def _warnings(job: Job, shortest: float, padding: int) -> list[str]:
+def _warnings(job: Job, shortest: float, padding: int, line_bandwidth: float | None) -> list[str]:
     found = [
         _too_short(job, shortest),
         _too_few_slices(job),
@@ -78,6 +81,7 @@ def _warnings(job: Job, shortest: float, padding: int) -> list[str]:
         _leakage(job),
         _padding(job, padding),
         _drift(job),
+        _line(job, line_bandwidth),
     ]
     return [sentence for sentence in found if sentence]
 
@@ -183,3 +187,23 @@ def _drift(job: Job) -> str | None:
         f"than the largest Rabi frequency {job.rabi_max / MHZ:g} MHz; expect a long pulse. "
         "Move the carrier or narrow the tolerance"
     )
+
+
+def _line(job: Job, bandwidth: float | None) -> str | None:
+    if bandwidth is None:
+        return None
+    have = bandwidth / 1e6
+    if bandwidth < 1 / job.duration:
+        return (
+            f"pulse.duration_ns: a pulse of {job.duration / NS:.6g} ns is wider than the line: it "
+            f"needs at least 1/duration = {1e-6 / job.duration:.4g} MHz, the line passes "
+            f"{have:.4g} MHz. Lengthen the pulse or widen the line"
+        )
+    fastest = 0.5 / job.slice_duration  # the drive may turn round from slice to slice
+    if bandwidth < fastest:
+        return (
+            f"pulse.slice_ns: slices may change at up to {fastest / 1e6:.4g} MHz, the line passes "
+            f"{have:.4g} MHz: the qubit sees a smoother pulse than the one computed without the "
+            "line. Take longer slices, or optimize through the line"
+        )
+    return None
