@@ -11,12 +11,13 @@ from collections.abc import Mapping, Sequence
 
 import numpy as np
 
-from shaper.physics.propagate import propagate
+from shaper.physics.propagate import propagate, segment_quaternions
 from shaper.pulse import Pulse
 from shaper.rotation import bloch_matrix, product
 from shaper.target import Target, infidelity
 from shaper.units import DEG, MHZ, NS
 
+_FOURIER_TERMS = 2**20  # terms of the Fourier integral at a time: some ten megabytes
 _TURN_PER_POINT = math.radians(3)  # largest turn between two points of a drawn path
 
 
@@ -117,17 +118,28 @@ def path_table(
         rate = np.hypot(np.hypot(*drive.T) * (1 + amplitude_error), detuning)
         cut = np.maximum(1, np.ceil(rate * durations / _TURN_PER_POINT)).astype(int)
         fine_drive, fine = np.repeat(drive, cut, axis=0), np.repeat(durations / cut, cut)
-        total, matrices = np.array([1.0, 0.0, 0.0, 0.0]), [np.eye(3)]
-        for step_drive, step in zip(fine_drive, fine, strict=True):
-            turn = propagate(step_drive[None], [step], amplitude_error, detuning)
-            total = product(turn, total)
-            matrices.append(bloch_matrix(total))
+        errors = np.array([amplitude_error]), np.array([detuning])
+        steps = segment_quaternions(fine_drive, fine, *errors)[:, 0]
+        matrices = bloch_matrix(_running_products(steps))
         time_ns = np.concatenate([[0.0], np.cumsum(fine)]) / NS
         table[name] = {
-            label: {"bloch": np.stack(matrices) @ np.asarray(start, float), "time_ns": time_ns}
+            label: {"bloch": matrices @ np.asarray(start, float), "time_ns": time_ns}
             for label, start in starts.items()
         }
     return table
+
+
+def _running_products(steps: np.ndarray) -> np.ndarray:
+    """[step + 1, 4]: the propagator up to each point, the identity first.
+
+    Doubling: after k rounds every entry holds the product of the last 2^k steps before it.
+    """
+    total = np.concatenate([[[1.0, 0.0, 0.0, 0.0]], steps])
+    reach = 1
+    while reach < len(total):
+        total[reach:] = product(total[reach:], total[:-reach])
+        reach *= 2
+    return total
 
 
 def spectrum_table(pulses: Mapping[str, Pulse], frequency: Sequence[float]) -> dict:
@@ -146,8 +158,14 @@ def spectrum_table(pulses: Mapping[str, Pulse], frequency: Sequence[float]) -> d
         drive, durations = pulse.played
         middle = np.cumsum(durations) - durations / 2
         envelope = drive[:, 0] + 1j * drive[:, 1]
-        held = durations * np.sinc(np.outer(omega, durations) / (2 * np.pi))
-        density[name] = np.abs((held * np.exp(-1j * np.outer(omega, middle))) @ envelope) ** 2
+        amplitude = np.zeros(len(omega), complex)
+        at_once = max(1, _FOURIER_TERMS // len(omega))  # runs
+        for first in range(0, len(durations), at_once):
+            part = slice(first, first + at_once)
+            held = durations[part] * np.sinc(np.outer(omega, durations[part]) / (2 * np.pi))
+            turn = np.exp(-1j * np.outer(omega, middle[part]))
+            amplitude += (held * turn) @ envelope[part]
+        density[name] = np.abs(amplitude) ** 2
     largest = max((float(np.max(d)) for d in density.values()), default=0.0) or 1.0
     floor = 1e-12  # of the largest: 120 dB down, below what any line passes on
     return {
