@@ -50,7 +50,7 @@ def test_eight_bits_lose_a_hundred_times_less(rng, pulse):
             assert polished < plain / BETTER
         assert np.max(np.hypot(*found.codes.T.astype(int))) <= dac.largest_code(bits)
         assert found.codes.dtype == np.int16
-        assert np.max(np.abs(found.codes - rounded)) < 60
+        assert np.max(np.abs(found.codes - rounded)) <= 1
 
 
 def test_robust_pulse_stays_robust(rng):

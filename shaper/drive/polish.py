@@ -19,6 +19,7 @@ from shaper.target import Target
 
 _MOST_MOVES = 3000  # looked at in pairs; beyond that a random choice of them
 _TRIED = 24  # of the most promising moves, by the exact propagator
+_FARTHEST = 1  # code steps from plain rounding: the file still says what the drive is
 _PATIENCE = 4  # random choices in a row without gain, then done
 _SERIES_BELOW = 1e-4  # squared half angle; the closed forms cancel below
 
@@ -67,7 +68,8 @@ def polish(
         rounds: at most so many choices of one or two steps.
         seed: of the random choice where there are too many moves.
     Returns:
-        Codes inside the bound, never worse than those given.
+        Codes inside the bound, none more than one step from where it was, never worse than those
+        given.
     """
     eps, delta = np.broadcast_arrays(
         np.atleast_1d(np.asarray(eps, dtype=float)), np.atleast_1d(np.asarray(delta, dtype=float))
@@ -80,7 +82,8 @@ def polish(
         return scale * _errors(drive, kernel, sample_rate, eps, delta, target.error_rows).ravel()
 
     aim = error(wanted)
-    codes = np.asarray(codes, dtype=int).copy()
+    rounded = np.asarray(codes, dtype=int)
+    codes = rounded.copy()
     miss = error(decode(codes, full_scale, bits)) - aim
     before = best = float(miss @ miss)
     taken = idle = 0
@@ -92,12 +95,12 @@ def polish(
             drive = decode(codes, full_scale, bits)
             slope = error_slope(drive, kernel, sample_rate, eps, delta, target.error_rows)
             rows = scale * step * np.moveaxis(slope, (-2, -1), (0, 1)).reshape(codes.size, -1)
-        index, sign = _allowed(codes, top, bound, rng)
+        index, sign = _allowed(codes, rounded, top, bound, rng)
         idle += 1
         for chosen in _candidates(miss, rows[index] * sign[:, None]):
             trial = codes.copy()
             np.add.at(trial.reshape(-1), index[chosen], sign[chosen])
-            if not _inside(trial, top, bound):
+            if not _inside(trial, rounded, top, bound):
                 continue
             new = error(decode(trial, full_scale, bits)) - aim
             if new @ new < best:
@@ -187,14 +190,14 @@ def _through_line(slope: np.ndarray, kernel: np.ndarray, samples: int) -> np.nda
     return out
 
 
-def _allowed(codes, top, bound, rng) -> tuple[np.ndarray, np.ndarray]:
-    """Flat index and sign of the single steps that stay inside the bound."""
+def _allowed(codes, rounded, top, bound, rng) -> tuple[np.ndarray, np.ndarray]:
+    """Flat index and sign of the single steps that stay inside the bound and near the rounding."""
     index = np.tile(np.arange(codes.size), 2)
     sign = np.repeat([1, -1], codes.size)
     moved = codes[index // 2].copy()
     moved[np.arange(len(index)), index % 2] += sign
-    reach = np.hypot(*moved.T) if bound == "circle" else np.max(np.abs(moved), axis=1)
-    keep = np.flatnonzero(reach <= top)
+    near = np.abs(codes.ravel()[index] + sign - rounded.ravel()[index]) <= _FARTHEST
+    keep = np.flatnonzero((_reach(moved, bound) <= top) & near)
     if len(keep) > _MOST_MOVES:
         keep = rng.choice(keep, _MOST_MOVES, replace=False)
     return index[keep], sign[keep]
@@ -211,6 +214,10 @@ def _candidates(miss: np.ndarray, moves: np.ndarray) -> list[np.ndarray]:
     return [chosen for _, chosen in sorted(found, key=lambda item: item[0])]
 
 
-def _inside(codes, top, bound) -> bool:
-    reach = np.hypot(*codes.T) if bound == "circle" else np.max(np.abs(codes), axis=1)
-    return bool(np.max(reach) <= top)
+def _inside(codes, rounded, top, bound) -> bool:
+    near = np.max(np.abs(codes - rounded)) <= _FARTHEST
+    return bool(near and np.max(_reach(codes, bound)) <= top)
+
+
+def _reach(codes, bound) -> np.ndarray:
+    return np.hypot(*codes.T) if bound == "circle" else np.max(np.abs(codes), axis=1)
