@@ -12,12 +12,14 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from shaper.errors import InputError
 from shaper.job import Job
 from shaper.pulse import Pulse, make_pulse
 from shaper.rotation import about_equator, in_time_order
 
 _SAME_PHASE = 1e-12  # rad; neighboring arcs this close in phase are one arc
 _NO_ANGLE = 1e-13  # rad; an arc this short is none: it would cost a whole sample for nothing
+MAX_SAMPLES = 2**22  # of one pulse: beyond, no AWG plays it from memory
 _SAMPLE_HAIR = 1e-9  # relative; a length this close above a whole number of samples is that number
 
 
@@ -140,6 +142,9 @@ def place(sequence: Sequence, job: Job) -> Pulse:
     exact; a uniform sequence stays uniform only as far as the samples allow. An arc longer than a
     whole number of samples by round-off only stays at that number and at the bound. A sequence
     without arcs is one sample of zero drive.
+
+    Raises:
+        InputError: if the pulse would be longer than ``MAX_SAMPLES``.
     """
     keep = sequence.angles > _NO_ANGLE
     angles, phases = sequence.angles[keep], sequence.phases[keep]
@@ -150,6 +155,7 @@ def place(sequence: Sequence, job: Job) -> Pulse:
         ceiling = job.rabi_max * arc_rates(sequence, job.bound)[keep]  # [arc] rad/s
         exact = angles / ceiling * job.sample_rate
         samples = np.maximum(np.ceil(exact * (1 - _SAMPLE_HAIR)), 1).astype(int)
+        require_playable(sequence.name, int(np.sum(samples)))
         rate = np.minimum(angles * job.sample_rate / samples, ceiling)
         drive = rate[:, None] * direction
     return make_pulse(
@@ -162,3 +168,12 @@ def place(sequence: Sequence, job: Job) -> Pulse:
         origin="composite",
         source=sequence.source,
     )
+
+
+def require_playable(name: str, samples: int) -> None:
+    """Refuse a pulse that no AWG holds, before its samples are made."""
+    if samples > MAX_SAMPLES:
+        raise InputError(
+            f"drive.sample_rate_MSps: expected a rate at which {name or 'the pulse'} has at most "
+            f"{MAX_SAMPLES} samples, got {samples} samples; lower the rate"
+        )

@@ -14,13 +14,13 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from shaper.composite.sequence import Sequence
+from shaper.composite.sequence import Sequence, require_playable
 from shaper.job import Job
 from shaper.pulse import Pulse, make_pulse
 
 _MOTZOI = "Motzoi, Gambetta, Rebentrost and Wilhelm, Phys. Rev. Lett. 103, 110501 (2009)"
 _LUCERO = "Lucero et al., Phys. Rev. A 82, 042339 (2010)"
-_MOST_SAMPLES = 1 << 22  # of one rotation
+_MOST_STEPS = 2000  # of one rotation; with more samples than that, each step is several
 
 
 def _cosine(t: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -102,10 +102,11 @@ def smooth_pulses(way: Sequence, job: Job) -> dict[str, Pulse]:
         if (entry.share and job.anharmonicity is None) or len(way.angles) == 0:
             continue
         parts = [_shortest(entry, a, p, job) for a, p in zip(way.angles, way.phases, strict=True)]
-        drive = np.concatenate(parts)
+        samples = np.concatenate([np.full(len(drive), held) for drive, held in parts])
+        require_playable(entry.name, int(np.sum(samples)))
         found[entry.name] = make_pulse(
-            drive,
-            np.ones(len(drive), dtype=int),
+            np.concatenate([drive for drive, _ in parts]),
+            samples,
             full_scale=job.rabi_max,
             bits=job.dac_bits,
             bound=job.bound,
@@ -116,24 +117,25 @@ def smooth_pulses(way: Sequence, job: Job) -> dict[str, Pulse]:
     return found
 
 
-def _shortest(entry: Smooth, angle: float, phase: float, job: Job) -> np.ndarray:
-    """[sample, 2] rad/s: doubled until it fits under the bound, then bisected."""
+def _shortest(entry: Smooth, angle: float, phase: float, job: Job) -> tuple[np.ndarray, int]:
+    """[step, 2] rad/s and samples a step: doubled until it fits under the bound, then bisected."""
+    # no smooth pulse is shorter than the rectangular one
+    held = math.ceil(angle / job.rabi_max * job.sample_rate / _MOST_STEPS)
+    rate = job.sample_rate / held
 
-    def made(samples: int) -> np.ndarray:
-        return smooth_rotation(entry, angle, phase, samples, job.sample_rate, job.anharmonicity)
+    def made(steps: int) -> np.ndarray:
+        return smooth_rotation(entry, angle, phase, steps, rate, job.anharmonicity)
 
-    def fits(samples: int) -> bool:
-        drive = made(samples)
+    def fits(steps: int) -> bool:
+        drive = made(steps)
         reach = np.hypot(*drive.T) if job.bound == "circle" else np.abs(drive)
         return bool(np.max(reach) <= job.rabi_max)
 
     long = 2
     while not fits(long):
         long *= 2
-        if long > _MOST_SAMPLES:
-            raise ValueError(f"smooth pulse: expected it to fit in {_MOST_SAMPLES} samples")
-    short = long // 2  # too short, or a single sample, which has no shape
+    short = long // 2  # too short, or a single step, which has no shape
     while long - short > 1:
         middle = (long + short) // 2
         long, short = (middle, short) if fits(middle) else (long, middle)
-    return made(long)
+    return made(long), held
