@@ -86,18 +86,12 @@
       const exact = (Math.abs(angle) / ceiling) * clock;
       const samples = Math.max(1, Math.ceil(exact * (1 - 1e-9)));
       const size = Math.min((Math.abs(angle) * clock) / samples, ceiling) * Math.sign(angle);
-      const code = (part) => (roundHalfEven(Math.min((size * part) / most, 1) * top) / top) * most;
+      const code = (part) => (Math.round(Math.min((size * part) / most, 1) * top) / top) * most;
       const direction = [Math.cos(axis + tilt), Math.sin(axis + tilt)];
       pulse.rates.push(direction.map((part) => (Math.abs(part) < 1e-12 ? 0 : code(part))));
       pulse.durations.push(samples / clock);
     }
     return pulse;
-  }
-
-  function roundHalfEven(value) {
-    const low = Math.floor(value);
-    if (value - low !== 0.5) return Math.round(value);
-    return low % 2 === 0 ? low : low + 1;
   }
 
   function zTarget(theta) {

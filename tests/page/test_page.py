@@ -9,8 +9,11 @@ from browser import CHROMIUM, DRIVER, KEYS, browser
 from report_case import make_case
 
 from shaper.composite import place, sandwich
+from shaper.evidence.tables import path_table
+from shaper.figures.discs import on_disc
+from shaper.job import parse_job
 from shaper.physics.propagate import propagate
-from shaper.rotation import about_z
+from shaper.rotation import about_z, bloch_matrix
 from shaper.store import load_waveform, save_waveform
 from shaper.target import Target, infidelity
 from shaper.units import DEG, MHZ
@@ -22,6 +25,7 @@ pytestmark = pytest.mark.skipif(
 
 AXE = Path(__file__).parent / "node_modules" / "axe-core" / "axe.min.js"
 SETTINGS = 50
+FOUR_DECIMALS = 5.1e-5  # how finely the page writes its points
 SAME = {"rel": 1e-9, "abs": 1e-15}  # double precision in both; below 1e-15 only round-off is left
 
 
@@ -65,8 +69,6 @@ def walk(chromium, rng, name):
 
 
 def test_sliders_by_keyboard_show_what_python_computes(chromium, case, rng):
-    from shaper.job import parse_job
-
     waveform, page = case
     job = parse_job(waveform.job_text)
     chromium.open(page)
@@ -96,9 +98,6 @@ def test_the_panel_starts_with_the_pulses_of_the_file(chromium, case):
 
 
 def test_the_end_of_the_way_is_the_rotated_start(chromium, case):
-    from shaper.job import parse_job
-    from shaper.rotation import bloch_matrix
-
     waveform, page = case
     chromium.open(page)
     chromium.type("#amplitude", KEYS["PageUp"])
@@ -106,11 +105,7 @@ def test_the_end_of_the_way_is_the_rotated_start(chromium, case):
     assert eps > 0
     q = propagate(*waveform.pulses["shaped"].played, eps, parse_job(waveform.job_text).detuning)
     for index, start in enumerate(STARTS.values()):
-        chromium.run(
-            "const s = document.getElementById('start'); s.value = arguments[0];"
-            "s.dispatchEvent(new Event('input'))",
-            str(index),
-        )
+        choose(chromium, "start", index)
         shown = chromium.text("#first-end").strip("()").replace("−", "-")
         np.testing.assert_allclose(
             [float(part) for part in shown.split(",")], bloch_matrix(q) @ start, atol=5.1e-4
@@ -119,6 +114,43 @@ def test_the_end_of_the_way_is_the_rotated_start(chromium, case):
         "return [...document.querySelectorAll('.way')].map(p => p.getAttribute('d').length)"
     )
     assert len(ways) == 4 and max(ways) > 100
+
+
+def test_the_drawn_way_is_the_projected_path(chromium, case):
+    waveform, page = case
+    chromium.open(page)
+    detuning = parse_job(waveform.job_text).detuning
+    pulse = {"shaped": waveform.pulses["shaped"]}
+    for index, (label, start) in enumerate(STARTS.items()):
+        choose(chromium, "start", index)
+        path = path_table(pulse, {label: start}, 0.0, detuning)["shaped"][label]["bloch"]
+        for half, sign in (("north", 1), ("south", -1)):
+            drawn = chromium.run(
+                "return document.querySelector(arguments[0] + ' .way').getAttribute('d')",
+                f"#first-{half}",
+            )
+            points = [[float(c) for c in p.split()] for p in re.split("[ML]", drawn)[1:]]
+            wanted = on_disc(path[sign * path[:, 2] >= -1e-9], north=sign > 0) * [1, -1]  # y is up
+            np.testing.assert_allclose(np.reshape(points, (-1, 2)), wanted, atol=FOUR_DECIMALS)
+            mark = chromium.run(
+                "const c = document.querySelector(arguments[0] + ' .start');"
+                "return c && [c.getAttribute('cx'), c.getAttribute('cy')].map(Number)",
+                f"#first-{half}",
+            )
+            if sign * start[2] < 0:
+                assert mark is None
+            else:
+                np.testing.assert_allclose(mark, on_disc(np.array(start), sign > 0) * [1, -1])
+
+
+def choose(chromium, control, index):
+    """Picks an entry of a list."""
+    chromium.run(
+        "const s = document.getElementById(arguments[0]); s.value = arguments[1];"
+        "s.dispatchEvent(new Event('input'))",
+        control,
+        str(index),
+    )
 
 
 def test_reset_and_the_other_pulse(chromium, case):
