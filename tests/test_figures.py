@@ -403,3 +403,47 @@ def test_only_this_room_knows_matplotlib_and_never_its_global_state():
             names = [a.name for a in node.names] if isinstance(node, ast.Import) else []
             names += [node.module or ""] if isinstance(node, ast.ImportFrom) else []
             assert not any(name.startswith("matplotlib.pyplot") for name in names), path
+
+
+@pytest.mark.parametrize("value", [0.0, 1.0, 1e-31, np.nan])
+def test_extreme_tables_are_drawn_without_a_word(value):
+    three = np.full(3, value)
+    axis = np.array([-1.0, 0.0, 1.0])
+    cut = {"against_amplitude": three, "against_detuning": three}
+    cuts = {"amplitude_error": axis / 10, "detuning_MHz": axis, "pulses": {"shaped": cut}}
+    maps = {
+        "amplitude_error": axis / 10,
+        "detuning_MHz": axis,
+        "infidelity": {"shaped": np.full((3, 3), value)},
+    }
+    drawn = [
+        figures.cuts_figure(cuts),
+        figures.map_figure(maps),
+        figures.history_figure({"infidelity": three[None]}),
+        figures.duration_figure({"duration_ns": axis + 2, "infidelity": three}),
+        figures.budget_figure({"source": ["line", "grid", "decay"], "pulses": {"shaped": three}}),
+    ]
+    for figure in drawn:
+        assert figures.encoded(figure, ".png")
+
+
+def test_silence_and_a_single_sample_are_drawn():
+    silent = make_pulse(
+        [[0.0, 0.0]],
+        [1],
+        full_scale=RABI,
+        bits=14,
+        bound="circle",
+        sample_rate=1e9,
+        origin="composite",
+    )
+    pulses = {"shaped": silent}
+    table = {"shaped": tables.waveform_table(silent)}
+    cuts = tables.cut_table(pulses, TARGET, [-0.1, 0.1], [-MHZ, MHZ])
+    for figure in (
+        figures.waveform_figure(table, rabi_max_MHz=25.0),
+        figures.comparison_figure(table, cuts, rabi_max_MHz=25.0),
+        figures.spectrum_figure(tables.spectrum_table(pulses, [-MHZ, 0.0, MHZ])),
+        figures.disc_figure(tables.path_table(pulses, {"|0⟩": (0, 0, 1)})),
+    ):
+        assert figures.encoded(figure, ".png")

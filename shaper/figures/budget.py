@@ -23,9 +23,8 @@ def budget_figure(budget: Mapping, *, theme: style.Theme = style.LIGHT) -> Figur
     figure = style.sheet(0.95 + len(sources) * (0.14 + 0.17 * len(pulses)), 0.85 * style.PAGE_WIDTH)
     ax = figure.subplots()
     seen = np.concatenate([np.ravel(style.positive(v)) for v in pulses.values()])
-    seen = seen[np.isfinite(seen)]
-    lowest = 10.0 ** np.floor(np.log10(seen.min()) - 0.3) if len(seen) else 1e-6
-    highest = seen.max() if len(seen) else 1.0
+    room = np.array([0.5, 4.0])  # for the stem of the smallest and the number beside the largest
+    lowest, _ = style.log_infidelity_axis(ax, np.outer(seen, room), axis="x")
     gap = 0.7 / len(pulses)
     for j, (name, values) in enumerate(pulses.items()):
         where = np.arange(len(sources)) + (j - (len(pulses) - 1) / 2) * gap
@@ -53,7 +52,6 @@ def budget_figure(budget: Mapping, *, theme: style.Theme = style.LIGHT) -> Figur
             ax.annotate(
                 text, (x, y), xytext=(6, 0), textcoords="offset points", va="center", fontsize=7.5
             )
-    style.log_infidelity_axis(ax, lowest, highest * 4, axis="x")
     ax.set_yticks(np.arange(len(sources)), sources)
     ax.set_ylim(len(sources) - 0.45, -0.55)
     ax.tick_params(axis="y", length=0)

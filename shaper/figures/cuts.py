@@ -74,12 +74,8 @@ def draw_cuts(
             "Amplitude error (%)",
         ),
     )
-    highest = max(
-        float(np.max(table[key])) for table in cuts["pulses"].values() for _, _, key, _, _ in panels
-    )
-    lowest = min(
-        float(np.min(table[key])) for table in cuts["pulses"].values() for _, _, key, _, _ in panels
-    )
+    seen = [table[key] for table in cuts["pulses"].values() for _, _, key, _, _ in panels]
+    seen = np.concatenate([np.ravel(values) for values in seen])
     for ax, x, key, half_width, label in panels:
         if half_width > 0:
             ax.axvspan(-half_width, half_width, color=theme.rule, alpha=0.55, linewidth=0, zorder=0)
@@ -95,7 +91,7 @@ def draw_cuts(
                 zorder=4 - 0.1 * k,
                 **pen[name].line,
             )
-        style.log_infidelity_axis(ax, max(lowest, LOWEST_SHOWN), highest)
+        style.log_infidelity_axis(ax, seen, lowest_shown=LOWEST_SHOWN)
         ax.set_xlim(x[0], x[-1])
         ax.xaxis.set_major_locator(MaxNLocator(5))
         ax.set_xlabel(label)

@@ -69,9 +69,9 @@ def duration_figure(
         goal = {"color": theme.mark, "linewidth": 1.1, "linestyle": (0, (5, 2))}
         ax.axhline(stop_infidelity, zorder=1, **goal)
         handles.append(Line2D([], [], label="stop_infidelity", **goal))
-    seen = [*values[np.isfinite(values)], *(v for _, v in others.values())]
+    seen = [*values, *(v for _, v in others.values())]
     seen += [stop_infidelity / 2] if stop_infidelity else []
-    style.log_infidelity_axis(ax, min(seen), max(seen))
+    style.log_infidelity_axis(ax, seen)
     ax.set_xlim(0, 1.04 * longest * factor)
     ax.set_xlabel(f"Duration ({unit})")
     ax.set_ylabel("Average gate infidelity")

@@ -28,7 +28,7 @@ def history_figure(
     values = np.atleast_2d(np.asarray(history["infidelity"], dtype=float))
     iteration = np.asarray(history.get("iteration", np.arange(values.shape[1])))
     values = style.positive(values)
-    best = int(np.nanargmin(np.nanmin(np.where(np.isnan(values), np.inf, values), axis=1)))
+    best = int(np.argmin(np.min(np.where(np.isnan(values), np.inf, values), axis=1)))
     front = style.strokes(["shaped"], theme)["shaped"]
     for k, row in enumerate(values):
         if k != best:
@@ -37,13 +37,13 @@ def history_figure(
     handles = [Line2D([], [], label=f"best start ({best + 1} of {len(values)})", **front.line)]
     if len(values) > 1:
         handles.append(Line2D([], [], label="other starts", color=theme.quiet, linewidth=0.8))
-    lowest, highest = np.nanmin(values), np.nanmax(values)
+    seen = list(values.ravel())
     if stop_infidelity:
         goal = {"color": theme.mark, "linewidth": 1.1, "linestyle": (0, (5, 2))}
         ax.axhline(stop_infidelity, zorder=1, **goal)
         handles.append(Line2D([], [], label="stop_infidelity", **goal))
-        lowest = min(lowest, stop_infidelity / 2)
-    style.log_infidelity_axis(ax, lowest, highest)
+        seen.append(stop_infidelity / 2)
+    style.log_infidelity_axis(ax, seen)
     ax.set_xlim(iteration[0], max(iteration[-1], iteration[0] + 1))
     ax.xaxis.set_major_locator(MaxNLocator(integer=True))
     ax.set_xlabel("Iteration")

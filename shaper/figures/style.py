@@ -226,10 +226,21 @@ def scaled(largest: float, unit: str) -> tuple[float, str]:
     return factor, ladder[place]
 
 
-def log_infidelity_axis(ax: Axes, lowest: float, highest: float, axis: str = "y") -> None:
-    """A decade axis for infidelity from ``lowest`` to ``highest``, whole decades, few labels."""
-    bottom = 10.0 ** np.floor(np.log10(max(lowest, 1e-32)))
-    top = min(10.0 ** np.ceil(np.log10(max(highest, bottom * 10))), 1.0)
+def log_infidelity_axis(
+    ax: Axes, values: Sequence[float], axis: str = "y", lowest_shown: float = 1e-32
+) -> tuple[float, float]:
+    """A decade axis that holds all ``values`` above zero: whole decades, few labels.
+
+    Args:
+        values: [k] what is drawn; zero, nan and what lies below ``lowest_shown`` do not count.
+    Returns:
+        Ends of the axis.
+    """
+    seen = np.asarray(values, dtype=float).ravel()
+    seen = np.clip(seen[seen > 0], lowest_shown, 1.0)
+    low, high = (seen.min(), seen.max()) if len(seen) else (1e-6, 1.0)
+    top = min(10.0 ** np.ceil(np.log10(high)), 1.0)
+    bottom = min(10.0 ** np.floor(np.log10(low)), top / 10)
     getattr(ax, f"set_{axis}scale")("log")
     getattr(ax, f"set_{axis}lim")(bottom, top)
     side = getattr(ax, f"{axis}axis")
@@ -239,6 +250,7 @@ def log_infidelity_axis(ax: Axes, lowest: float, highest: float, axis: str = "y"
     side.set_minor_formatter(NullFormatter())
     ax.grid(axis=axis, which="major")
     ax.set_axisbelow(True)
+    return bottom, top
 
 
 def decade(value: float, _position: int | None = None) -> str:
