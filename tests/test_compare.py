@@ -298,3 +298,19 @@ def test_compare_does_not_import_jax():
 
     code = "import sys, shaper.workflow.compare; sys.exit('jax' in sys.modules)"
     assert subprocess.run([sys.executable, "-c", code], check=False).returncode == 0
+
+
+def test_a_qubit_with_more_levels_is_judged_on_them(waveform):
+    """At 25 MHz against -210 MHz rectangles leak; half a derivative does not."""
+    text = ROBUST.replace("[qubit]", "[qubit]\nanharmonicity_MHz = -210.0")
+    names = ["cosine", "cosine-half-derivative", "two-pulse-reversed-Knill"]
+    comparison = compare(dataclasses.replace(waveform, job_text=text), names)
+    rows = {row.name: row for row in comparison.rows}
+    smooth, hard = rows["cosine-half-derivative"], rows["two-pulse-reversed-Knill"]
+    assert smooth.levels.leakage < 1e-4 < 1e-2 < hard.levels.leakage
+    assert smooth.levels.nominal < 1e-4 < smooth.nominal  # two levels alone would misjudge it
+    for row in comparison.rows:
+        assert row.levels.worst >= row.levels.nominal >= 2 / 3 * row.levels.leakage
+        assert row.total == row.levels.worst + row.coherence
+    assert comparison.verdict.winner.total == min(row.total for row in comparison.rows)
+    assert "on three levels" in as_json(comparison)["verdict"]["sentence"]

@@ -8,6 +8,7 @@ import pytest
 from shaper.composite.compose import library_pulses, single
 from shaper.composite.smooth import SMOOTH, smooth_pulses, smooth_rotation
 from shaper.errors import InputError
+from shaper.evidence.levels import level_infidelity, on_levels
 from shaper.job import parse_job
 from shaper.physics.propagate import propagate
 from shaper.target import infidelity
@@ -24,12 +25,12 @@ LADDER = {
 }
 
 
-def three_levels(drive, duration):
+def three_levels(drive, duration, anharmonicity=ANHARMONICITY):
     """[3, 3] complex: product of exponentials of the ladder's Hamiltonian, level 2 at the end."""
     up = np.diag([1.0, math.sqrt(2)], 1)
     x, y = (up + up.T) / 2, (-1j * up + 1j * up.T) / 2
     h = drive[:, 0, None, None] * x + drive[:, 1, None, None] * y
-    h = h + np.diag([0, 0, ANHARMONICITY])
+    h = h + np.diag([0, 0, anharmonicity])
     values, vectors = np.linalg.eigh(h)
     steps = np.einsum("kij,kj,klj->kil", vectors, np.exp(-1j * values * duration), vectors.conj())
     total = np.eye(3, dtype=complex)
@@ -48,6 +49,28 @@ def test_derivative_correction_against_published(name):
     error = 1 - (overlap + np.trace(block.conj().T @ block).real) / 6
     assert leakage == pytest.approx(LADDER[name][0], rel=1e-4, abs=1e-12)
     assert error == pytest.approx(LADDER[name][1], rel=1e-4)
+
+
+def test_the_comparison_sees_the_levels():
+    """From the codes, through another path than above: same leakage as the plain product."""
+    here = job(gate="x")
+    pulses = library_pulses(here)
+    found = {name: on_levels(*pulses[name].pulse.played, here) for name in ("cosine", *LADDER)}
+    for name, (error, lost) in found.items():
+        drive, durations = pulses[name].pulse.played
+        total = np.eye(3, dtype=complex)
+        for rate, duration in zip(drive, durations, strict=True):
+            total = three_levels(rate[None], duration, here.anharmonicity) @ total
+        block = total[:2, :2]
+        assert lost == pytest.approx(1 - np.trace(block.conj().T @ block).real / 2, abs=1e-13)
+        assert error >= 2 / 3 * lost, name
+        at = level_infidelity(
+            drive, durations, here, np.array([0.0, 0.03]), here.detuning + np.array([0.0, 1e6])
+        )
+        assert at[0] == pytest.approx(error, rel=1e-9)
+        assert at[1] != pytest.approx(error, rel=1e-3)
+    assert found["gaussian-derivative"][1] < 0.05 * found["gaussian"][1]
+    assert found["gaussian-half-derivative"][0] < 0.2 * found["gaussian"][0]
 
 
 def job(bound="circle", anharmonicity="anharmonicity_MHz = -210.0", gate="z"):

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import json
 import sys
 
@@ -95,8 +96,14 @@ def text(comparison) -> str:
         fill(
             "On paper: worst case of the sequence itself, before sample grid and codes. Windows: "
             "largest +- error with infidelity below that, the other error zero. Leading terms: of "
-            "the infidelity in the amplitude error e and in f = detuning / W_max. Decay: "
-            "infidelity of idling as long (T1, T2); total: worst plus decay.",
+            "the infidelity in the amplitude error e and in f = detuning / W_max. "
+            + (
+                "3 levels: infidelity without errors and worst on a three-level ladder, leakage "
+                "counted; the verdict goes by it, all other figures are those of two levels. "
+                if job.anharmonicity
+                else ""
+            )
+            + "Decay: infidelity of idling as long (T1, T2); total: worst plus decay.",
         ),
     ]
     if comparison.frame_update:
@@ -141,7 +148,9 @@ def _robustness_table(comparison) -> str:
     rows = comparison.rows
     rate, hertz = rate_unit(max(row.detuning_windows[-1] for row in rows))
     header = ["pulse", "on paper", "e < 1e-4", "e < 1e-3", f"f < 1e-4 {rate}", f"f < 1e-3 {rate}"]
-    header += ["leading in e", "leading in f", "decay", "total"]
+    header += ["leading in e", "leading in f"]
+    laddered = rows[0].levels is not None
+    header += ["3 levels", "worst", "leakage"] * laddered + ["decay", "total"]
 
     def term(found, letter: str) -> str:
         return f"{found.coefficient:.2g} {letter}^{found.order}" if found.order else "0"
@@ -156,6 +165,7 @@ def _robustness_table(comparison) -> str:
                 *(plain(window / hertz, 3) for window in row.detuning_windows),
                 term(row.amplitude_order, "e"),
                 term(row.detuning_order, "f"),
+                *(small(value) for value in (dataclasses.astuple(row.levels) if laddered else ())),
                 small(row.coherence),
                 small(row.total),
             ]

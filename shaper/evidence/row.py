@@ -5,7 +5,11 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
+import numpy as np
+
+from shaper.bench import error_grid
 from shaper.composite.sequence import Sequence, played_ideally
+from shaper.evidence.levels import level_infidelity, on_levels
 from shaper.evidence.order import Leading, leading
 from shaper.evidence.proof import prove_pulse
 from shaper.evidence.score import box_infidelity
@@ -14,7 +18,23 @@ from shaper.job import Job
 from shaper.physics.decay import coherence_limit
 from shaper.pulse import Pulse
 
+_LEVEL_POINTS = 9  # per axis: levels cost a hundred times what the qubit does
 THRESHOLDS = (1e-4, 1e-3)  # of the tolerance windows
+
+
+@dataclass(frozen=True)
+class OnLevels:
+    """Figures of a three-level ladder, leakage counted.
+
+    Attributes:
+        nominal: infidelity without errors.
+        worst: largest infidelity on a coarse grid over the tolerance box, corners included.
+        leakage: population lost from the qubit, without errors.
+    """
+
+    nominal: float
+    worst: float
+    leakage: float
 
 
 @dataclass(frozen=True)
@@ -41,6 +61,8 @@ class Row:
         detuning_windows: rad/s, likewise.
         amplitude_order, detuning_order: leading term of the infidelity, of the sequence on paper
             where there is one, else of the float waveform; detuning in units of W_max.
+        levels: what three levels make of it; None without an anharmonicity. All other
+            infidelities are those of two levels.
         coherence: infidelity of idling as long, from the job's T1 and T2; None without them.
     """
 
@@ -61,12 +83,18 @@ class Row:
     detuning_windows: tuple[float, ...]
     amplitude_order: Leading
     detuning_order: Leading
+    levels: OnLevels | None
     coherence: float | None
 
     @property
     def total(self) -> float:
         """Worst infidelity with decay, to first order the sum of both."""
-        return self.worst + (self.coherence or 0.0)
+        return self.worst_known + (self.coherence or 0.0)
+
+    @property
+    def worst_known(self) -> float:
+        """Worst infidelity by the best model that the job allows: three levels, else two."""
+        return self.worst if self.levels is None else self.levels.worst
 
 
 def measure(
@@ -107,5 +135,13 @@ def measure(
         ),
         amplitude_order=leading(*on_paper, job, "amplitude"),
         detuning_order=leading(*on_paper, job, "detuning"),
+        levels=None if job.anharmonicity is None else _on_levels(*played, job),
         coherence=coherence_limit(pulse.duration, job.t1, job.t2) if decays else None,
     )
+
+
+def _on_levels(drive: np.ndarray, durations: np.ndarray, job: Job) -> OnLevels:
+    nominal, leakage = on_levels(drive, durations, job)
+    grid = error_grid(job, _LEVEL_POINTS, _LEVEL_POINTS)
+    over_box = level_infidelity(drive, durations, job, grid.eps, grid.delta)
+    return OnLevels(nominal, max(nominal, float(np.max(over_box))), leakage)

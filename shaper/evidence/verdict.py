@@ -15,6 +15,7 @@ import numpy as np
 from scipy.optimize import brentq
 
 from shaper.bench import error_grid
+from shaper.evidence.levels import level_infidelity
 from shaper.evidence.row import Row
 from shaper.job import Job
 from shaper.physics.decay import coherence_limit
@@ -26,6 +27,7 @@ from shaper.target import infidelity
 NEGLIGIBLE = 1e-9  # infidelity that no bench can tell from zero: such pulses are level
 _LEVEL = 1.01  # a factor too small to speak of
 _SCAN_POINTS = 15  # per side of the box while its size is varied
+_LEVEL_SCAN_POINTS = 5  # the same on three levels
 _SCALES = np.geomspace(1 / 32, 32, 41)  # sizes of the box tried, in tolerances of the job
 _LARGEST_AMPLITUDE = 0.5  # relative; no bench is worse
 _BISECTIONS = 20  # of the size at which the answer changes
@@ -128,7 +130,7 @@ def _overtakes(rival: Row, winner: Row, path: np.ndarray, job: Job) -> float | N
 
     def behind(t2: float) -> float:
         decay = [coherence_limit(row.duration, job.t1, t2) for row in (rival, winner)]
-        return (rival.worst - winner.worst) + (decay[0] - decay[1])
+        return (rival.worst_known - winner.worst_known) + (decay[0] - decay[1])
 
     gaps = [behind(t2) for t2 in path]
     ahead = next((k for k, gap in enumerate(gaps) if gap < 0), 0)
@@ -142,7 +144,8 @@ def _changes_with_box(
 ) -> tuple[Change | None, Change | None]:
     """The nearest sizes of the tolerance box to either side at which another pulse wins."""
     box = assumed_box(job)
-    grid = error_grid(box, _SCAN_POINTS, _SCAN_POINTS)
+    points = _SCAN_POINTS if job.anharmonicity is None else _LEVEL_SCAN_POINTS
+    grid = error_grid(box, points, points)
     played = {row.name: pulses[row.name].played for row in rows}
 
     corners = np.flatnonzero(
@@ -152,8 +155,12 @@ def _changes_with_box(
 
     def cost(row: Row, scale: float, points: np.ndarray | slice) -> tuple[float, float]:
         eps, delta = scale * grid.eps[points], scale * (grid.delta[points] - job.detuning)
-        q = propagate(*played[row.name], eps, job.detuning + delta)
-        worst = float(np.max(infidelity(q, job.target)))
+        if job.anharmonicity is None:
+            q = propagate(*played[row.name], eps, job.detuning + delta)
+            worst = float(np.max(infidelity(q, job.target)))
+        else:
+            errors = level_infidelity(*played[row.name], job, eps, job.detuning + delta)
+            worst = float(np.max(errors))
         return _cost(worst + (row.coherence or 0.0), row.duration)
 
     def best(scale: float) -> str:
@@ -239,7 +246,10 @@ def sentence(verdict: Verdict, job: Job) -> str:
 
 def _figures(row: Row, job: Job) -> str:
     """Total, its parts, and the duration of one pulse in words."""
-    said = f"{row.worst:.2e} {'worst over the box' if job.has_tolerance else 'without errors'}"
+    kind = "worst over the box" if job.has_tolerance else "without errors"
+    said = f"{row.worst_known:.2e} {kind}"
+    if row.levels is not None:
+        said += " on three levels"
     if row.coherence is not None:
         said = f"{row.total:.2e} = {said} + {row.coherence:.2e} decay"
     return f"{said} in {time(row.duration, 5)}"
