@@ -1,5 +1,6 @@
 """``shaper new``, ``shaper check`` and the JSON Schema of the job file."""
 
+import dataclasses
 import io
 import json
 import math
@@ -7,18 +8,24 @@ import tomllib
 import typing
 
 import jsonschema
+import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from scipy.optimize import minimize
 
 from shaper.cli import main
 from shaper.cli.new import GATES
+from shaper.composite import time_optimal
 from shaper.errors import InputError
 from shaper.job import parse_job
 from shaper.job.json_schema import SCHEMA_FILE, job_json_schema, schema_text
 from shaper.job.schema import JobFile, TargetSection
 from shaper.job.template import job_text, toml_value
-from shaper.workflow.check import check_job
+from shaper.physics.propagate import propagate
+from shaper.rotation import from_axis_angle
+from shaper.target import Target, infidelity
+from shaper.workflow.check import check_job, least_worst_infidelity
 from shaper.workflow.new import Wish, new_job
 
 TABLE_DIGITS = 1e-9  # relative; figures of this module are rounded to twelve digits
@@ -266,6 +273,49 @@ def test_warnings_name_the_key_and_the_remedy(changes, words):
 def test_a_line_too_narrow_is_warned_of(bandwidth, words):
     assert any(words in w for w in check_job(job_with(), bandwidth)["warnings"])
     assert not any("line" in w for w in check_job(job_with(), 600e6)["warnings"])
+
+
+def test_the_floor_is_below_every_pulse_and_not_far_below_the_best(rng):
+    for share, edge in ((0.5, 0.0), (0.9, 0.0), (0.99, 0.02)):
+        for gate in ('gate = "z"', 'gate = "x"'):
+            probe = job_with(('gate = "z"', gate))
+            slices = 12
+            time = share * time_optimal(probe.target).length / (1 - edge)
+            job = dataclasses.replace(
+                probe,
+                amplitude_tolerance=edge,
+                slices=slices,
+            )
+            job = dataclasses.replace(job, rabi_max=time / job.duration)
+            floor = least_worst_infidelity(job)
+            assert floor > 0
+
+            def worst(phases, job=job):
+                drive = job.rabi_max * np.stack([np.cos(phases), np.sin(phases)], axis=-1)
+                durations = np.full(len(phases), job.slice_duration)
+                q = propagate(drive, durations, -job.amplitude_tolerance, 0.0)
+                return float(infidelity(q, job.target))
+
+            starts = rng.normal(size=(3, slices)).cumsum(axis=1)
+            found = min(minimize(worst, start, method="BFGS").fun for start in starts)
+            assert floor <= found * (1 + 1e-6)  # below what any search can reach
+            if gate == 'gate = "x"' and edge == 0:  # a shorter turn about x is the optimum
+                best = 2 / 3 * np.sin((1 - share) * np.pi / 4) ** 2
+                assert found == pytest.approx(best, rel=1e-3)
+
+
+def test_among_rotations_by_one_angle_the_one_about_z_takes_longest(rng):
+    for _ in range(300):
+        axis, angle = rng.normal(size=3) * [1, 1, rng.choice([1, 5, 50])], rng.uniform(0, np.pi)
+        length = time_optimal(Target(from_axis_angle(axis, angle))).length
+        assert length <= math.sqrt(angle * (4 * math.pi - angle)) * (1 + TABLE_DIGITS)
+
+
+def test_a_duration_that_suffices_has_no_floor():
+    assert least_worst_infidelity(job_with()) is None
+    assert least_worst_infidelity(job_with(("60.0\nslice", "27.0\nslice"))) is None
+    assert least_worst_infidelity(job_with(("60.0\nslice", "26.0\nslice"))) > 0
+    assert "(infidelity at least" in warnings_of(("60.0\nslice", "26.0\nslice"))[0]
 
 
 def test_box_bound_says_best_known():

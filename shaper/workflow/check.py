@@ -46,6 +46,7 @@ def check_job(job: Job, line_bandwidth: float | None = None) -> dict:
             "time-optimal, published" if job.bound == "circle" else "best known for the box"
         ),
         "duration_over_shortest": job.duration / shortest if shortest > 0 else None,
+        "least_worst_infidelity": least_worst_infidelity(job),
         "sandwich_duration_ns": plain.duration / NS,
         "coherence_limited_infidelity": (
             coherence_limit(job.duration, job.t1, job.t2) if decays else None
@@ -57,6 +58,30 @@ def check_job(job: Job, line_bandwidth: float | None = None) -> dict:
         key: float(f"{value:.12g}") if isinstance(value, float) else value  # 120, not 120.00..01
         for key, value in facts.items()
     }
+
+
+def least_worst_infidelity(job: Job) -> float | None:
+    """A floor under the worst case over the tolerance: no pulse of this duration is better.
+
+    With the drive at the low edge of its tolerance the pulse has the time ``t = W_max (1 -
+    amplitude) T``, short of the time-optimal length ``L`` by ``s = L - t``. Lengths obey the
+    triangle inequality, so the error left is a rotation that itself takes at least ``s``; among
+    rotations by ``phi`` the longest is the one about z, ``sqrt(phi (4 pi - phi))``. So ``phi >=
+    2 pi - sqrt(4 pi^2 - s^2)`` and the infidelity is at least ``scale sin^2(phi/2)``.
+
+    Returns:
+        None where the duration suffices, and for the box, whose lengths are not proven shortest.
+    Source:
+        Derived here; that z is the longest is checked numerically in the tests.
+    """
+    if job.bound != "circle":
+        return None
+    time = job.rabi_max * (1 - job.amplitude_tolerance) * job.duration
+    length = limit(job.target, job.bound)
+    if time >= length * (1 - _HAIR):
+        return None
+    error = 2 * math.pi - math.sqrt(4 * math.pi**2 - (length - time) ** 2)
+    return job.target.scale * math.sin(min(error, math.pi) / 2) ** 2
 
 
 def frame_update(job: Job) -> str | None:
@@ -88,11 +113,13 @@ def _warnings(job: Job, shortest: float, padding: int, line_bandwidth: float | N
 
 def _too_short(job: Job, shortest: float) -> str | None:
     have, need = job.duration / NS, shortest / NS
+    floor = least_worst_infidelity(job)
+    at_best = f" (infidelity at least {floor:.2g})" if floor else ""
     kind = "no pulse can be" if job.bound == "circle" else "no pulse is known that is"
     if have < need * (1 - _HAIR):
         return (
             f"pulse.duration_ns: {have:.6g} ns, but {kind} shorter than {need:.6g} ns for "
-            f"{job.target_name} at {job.rabi_max / MHZ:g} MHz; expect exit code 3. "
+            f"{job.target_name} at {job.rabi_max / MHZ:g} MHz{at_best}; expect exit code 3. "
             "Lengthen the pulse or raise drive.rabi_max_MHz"
         )
     weak = need / (1 - job.amplitude_tolerance)  # the drive at the low edge of its tolerance
@@ -100,7 +127,7 @@ def _too_short(job: Job, shortest: float) -> str | None:
         return (
             f"tolerance.amplitude: with {100 * job.amplitude_tolerance:g} % less drive the gate "
             f"takes at least {weak:.6g} ns, the pulse has {have:.6g} ns: that edge cannot be "
-            "met. Lengthen the pulse, or let --shortest find the duration"
+            f"met{at_best}. Lengthen the pulse, or let --shortest find the duration"
         )
     return None
 
