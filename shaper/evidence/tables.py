@@ -178,7 +178,11 @@ def spectrum_table(pulses: Mapping[str, Pulse], frequency: Sequence[float]) -> d
 
 
 def plain(table):
-    """The table as JSON takes it: arrays to lists, nan to None."""
+    """The table as JSON takes it: arrays to lists, nan to None.
+
+    >>> plain({"phase_deg": np.array([90.0, np.nan]), "samples": np.int64(4)})
+    {'phase_deg': [90.0, None], 'samples': 4}
+    """
     if isinstance(table, Mapping):
         return {key: plain(value) for key, value in table.items()}
     if isinstance(table, np.ndarray):

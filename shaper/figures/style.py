@@ -199,7 +199,11 @@ def legend_above(figure: Figure, handles: list, title: str = "") -> None:
 
 
 def scientific(value: float) -> str:
-    """Two digits and a power of ten, for labels: 2.4e-4 as 2.4×10⁻⁴."""
+    """Two digits and a power of ten, for labels.
+
+    >>> scientific(0.000236)
+    '2.4×10⁻⁴'
+    """
     digits, exponent = f"{value:.1e}".split("e")
     return f"{digits}×10" + str(int(exponent)).translate(_SUPERSCRIPT)
 
@@ -212,6 +216,11 @@ def scaled(largest: float, unit: str) -> tuple[float, str]:
         unit: "ns" or "MHz".
     Returns:
         ``(factor, shown)``: multiply the numbers by ``factor`` and label them ``shown``.
+
+    >>> scaled(0.005, "MHz")
+    (1000.0, 'kHz')
+    >>> scaled(20_000, "ns")
+    (0.001, 'µs')
     """
     ladder = {"ns": ("ns", "µs", "ms", "s"), "MHz": ("GHz", "MHz", "kHz", "Hz")}[unit]
     place = ladder.index(unit)

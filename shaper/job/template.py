@@ -99,6 +99,9 @@ def _commented(text: str, comment: str) -> str:
 def toml_value(value: Any) -> str:
     """A string, number, truth value or list of such as TOML writes it.
 
+    >>> toml_value(["z", 90.0, True])
+    '["z", 90.0, true]'
+
     Raises:
         TypeError: for anything else.
     """

@@ -50,7 +50,11 @@ def number(value: float | None, form: str) -> str:
 
 
 def typeset(text: str) -> str:
-    """Text of ours as HTML: powers of ten, plus-minus and micro as people write them."""
+    """Text of ours as HTML: powers of ten, plus-minus and micro as people write them.
+
+    >>> typeset("+-2 % in 45 us")
+    '±2 % in 45 µs'
+    """
     text = escape(text).replace("+-", "±")
     text = re.sub(r"(?<=[0-9] )us\b", "µs", text)
     return re.sub(
