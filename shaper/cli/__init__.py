@@ -14,7 +14,7 @@ import sys
 from shaper import __version__
 from shaper.errors import ShaperError
 
-COMMANDS = ("new", "check", "optimize", "compose", "compare", "report", "load", "output")
+COMMANDS = ("new", "check", "optimize", "compose", "compare", "verify", "report", "load", "output")
 INTERRUPTED = 130
 
 

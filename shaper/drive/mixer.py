@@ -175,24 +175,23 @@ def upconverted(
 
 
 def at_carrier(
-    played: np.ndarray,
-    sample_rate: float,
+    drive: np.ndarray,
+    rate: float,
     frequency: float,
-    cells: int,
     *,
     first: int = 0,
     phase: float = 0.0,
 ) -> np.ndarray:
-    """Held samples on an intermediate frequency, seen from the carrier, as exact cell means.
+    """What stands on an intermediate frequency, seen from the carrier, as exact cell means.
 
     Args:
-        played: [sample, 2] rad/s.
-        cells: per sample.
+        drive: [cell, 2] rad/s, constant over each cell.
+        rate: cells per second.
+        first: cells from the phase reference to the first one.
     Returns:
-        [sample * cells, 2] rad/s.
+        [cell, 2] rad/s.
     """
-    time = (first + (np.arange(len(played) * cells) + 0.5) / cells) / sample_rate
-    turn = np.exp(-1j * (2 * np.pi * frequency * time + phase))
-    z = np.repeat(np.asarray(played) @ np.array([1, 1j]), cells) * turn
-    z = z * np.sinc(frequency / sample_rate / cells)
+    time = (first + np.arange(len(drive)) + 0.5) / rate
+    turn = np.exp(-1j * (2 * np.pi * frequency * time + phase)) * np.sinc(frequency / rate)
+    z = np.asarray(drive) @ np.array([1, 1j]) * turn
     return np.stack([z.real, z.imag], axis=-1)

@@ -1,0 +1,77 @@
+"""All that stands between the DAC's samples and the qubit, in the order in which they meet it."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from shaper.drive import mixer
+from shaper.drive.line import Line, filtered, taps
+
+
+@dataclass(frozen=True)
+class Path:
+    """From the samples to the qubit.
+
+    Attributes:
+        calibration: of the mixer, or None for a perfect one.
+        intermediate_frequency: Hz; zero if the samples stand on the carrier.
+        phase: rad, of the intermediate frequency at its reference.
+        first: samples from the phase reference to the first one.
+        line: behind the mixer, or None.
+    """
+
+    calibration: mixer.Calibration | None = None
+    intermediate_frequency: float = 0.0
+    phase: float = 0.0
+    first: int = 0
+    line: Line | None = None
+
+    @property
+    def straight(self) -> bool:
+        """Whether the samples arrive as they are."""
+        return self.line is None and not self.intermediate_frequency and self.calibration is None
+
+    def at_qubit(
+        self, samples: np.ndarray, sample_rate: float, cells: int
+    ) -> tuple[np.ndarray, float]:
+        """The drive at the qubit, as means over cells.
+
+        Args:
+            samples: [sample, 2] rad/s, what the DAC plays.
+            cells: per sample.
+        Returns:
+            [cell, 2] rad/s, lead and tail of the line included, and the length of a cell (s).
+        """
+        rate = sample_rate * cells
+        calibration = self.calibration or mixer.Calibration()
+        drive = mixer.arrived(samples, calibration, sample_rate, cells)
+        if self.intermediate_frequency:
+            drive = mixer.at_carrier(
+                drive,
+                rate,
+                self.intermediate_frequency,
+                first=self.first * cells,
+                phase=self.phase,
+            )
+        if self.line is not None:
+            drive = filtered(taps(self.line, 1 / rate, 1).kernel, drive)
+        return drive, 1 / rate
+
+    def to_play(self, drive: np.ndarray, sample_rate: float) -> np.ndarray:
+        """What to play for ``drive`` to leave the mixer on the carrier; no bound is applied.
+
+        The line is not touched: it is in the model of the search, or in ``line.inverse``.
+        """
+        if self.intermediate_frequency:
+            drive = mixer.upconverted(
+                drive,
+                sample_rate,
+                self.intermediate_frequency,
+                first=self.first,
+                phase=self.phase,
+            )
+        if self.calibration is not None:
+            drive = mixer.corrected(drive, self.calibration, sample_rate)
+        return np.asarray(drive, dtype=float)

@@ -1,0 +1,254 @@
+"""The fourth job: recompute by independent means what a file claims, and its error budget."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+import numpy as np
+
+from shaper.drive import dac
+from shaper.errors import InputError
+from shaper.evidence import independent
+from shaper.evidence.budget import SOURCES, Budget, Effects, error_budget
+from shaper.job import Job, parse_job
+from shaper.pulse import Pulse, Score, Table, Waveform
+from shaper.target import Target
+
+RELATIVE = 0.01  # how far a claim may be off; grids differ, physics does not
+_WORST_POINTS = 13  # per axis, evenly spaced, edges included
+_MEAN_POINTS = 9  # per axis, Gauss-Legendre
+
+
+@dataclass(frozen=True)
+class Claim:
+    """One figure of the file beside its recomputation.
+
+    Attributes:
+        name: what it is.
+        claimed: as stored.
+        found: recomputed.
+        holds: whether they agree: within ``RELATIVE`` and the resolution of the means; a proved
+            upper bound has to lie above what was found.
+    """
+
+    name: str
+    claimed: float
+    found: float
+    holds: bool
+
+
+@dataclass(frozen=True)
+class Verification:
+    """One pulse under the second opinion.
+
+    Attributes:
+        claims: figures of the file, each beside its recomputation.
+        budget: where the infidelity comes from on the bench of the job.
+    """
+
+    claims: tuple[Claim, ...]
+    budget: Budget
+
+    @property
+    def holds(self) -> bool:
+        """Whether every claim does."""
+        return all(claim.holds for claim in self.claims)
+
+
+def effects_of(job: Job) -> Effects:
+    """What the budget reckons with on the bench of a job."""
+    return Effects(
+        anharmonicity=job.anharmonicity,
+        t1=job.t1,
+        t2=job.t2,
+        amplitude_tolerance=job.amplitude_tolerance,
+        detuning_tolerance=job.detuning_tolerance,
+        detuning=job.detuning,
+    )
+
+
+def verify(
+    waveform: Waveform, names: Sequence[str] = (), effects: Effects | None = None
+) -> dict[str, Verification]:
+    """Recompute what a file claims about its pulses, and make their error budgets.
+
+    Args:
+        waveform: as ``shaper.load_waveform`` gives it.
+        names: which pulses; default: the optimized ones, or all where there are none; "all".
+        effects: default: those of the job in the file.
+    Raises:
+        InputError: if the job in the file is not valid, or a pulse is not there.
+    """
+    job = parse_job(waveform.job_text, "job in the file")
+    effects = effects or effects_of(job)
+    found = {}
+    for name in _chosen(waveform, names):
+        pulse = waveform.pulses[name]
+        found[name] = Verification(
+            check_claims(pulse, waveform.scores[name], job.target, effects),
+            error_budget(pulse, job.target, effects),
+        )
+    return found
+
+
+def check_claims(pulse: Pulse, score: Score, target: Target, effects: Effects) -> tuple[Claim, ...]:
+    """Every stored infidelity of one pulse beside its recomputation, two levels, no decay.
+
+    Behind a path that the search saw, the figures are those at the qubit, the path included.
+    """
+    path = effects.path
+    if effects.correction != "model":
+        path = replace(path, line=None)
+    floats = np.repeat(pulse.drive, pulse.samples, axis=0)
+    sides = (effects.amplitude_tolerance, effects.detuning_tolerance)
+    claims = []
+    for label, samples, claimed in (
+        (
+            "float",
+            path.to_play(floats, pulse.sample_rate),
+            (score.nominal, score.mean, score.worst),
+        ),
+        (
+            "codes",
+            dac.decode(pulse.codes, pulse.full_scale, pulse.bits),
+            (score.dac, score.dac_mean, score.dac_worst),
+        ),
+    ):
+        drive, durations = _at_qubit(path, samples, pulse.sample_rate, effects.cells)
+        found = _figures(drive, durations, target, effects.detuning, sides)
+        for kind, stored, value in zip(("nominal", "mean", "worst"), claimed, found, strict=True):
+            if not np.isnan(stored):
+                claims.append(Claim(f"{label}, {kind}", stored, value, _agree(stored, value)))
+        if label == "codes" and score.guaranteed is not None:
+            above = score.guaranteed >= found[2] - independent.RESOLUTION
+            claims.append(Claim("codes, guaranteed", score.guaranteed, found[2], above))
+    return tuple(claims)
+
+
+def with_evidence(waveform: Waveform, found: dict[str, Verification]) -> Waveform:
+    """The waveform with budgets and recomputed figures among its evidence tables."""
+    pulses = ", ".join(found)
+    budgets = [v.budget for v in found.values()]
+    alone = np.array([[b.alone.get(s, np.nan) for s in SOURCES] for b in budgets])
+    worst = [
+        max((c.found for c in v.claims if c.name.startswith("codes")), default=np.nan)
+        for v in found.values()
+    ]
+    axis = ("verified_pulse",)
+    tables = {
+        "budget": Table(
+            alone,
+            (*axis, "source"),
+            "1",
+            f"infidelity by each effect alone; pulses: {pulses}; sources: {', '.join(SOURCES)}",
+        ),
+        "budget_together": Table(
+            np.array([b.together for b in budgets]),
+            axis,
+            "1",
+            "infidelity under all effects at once, at the worst point of the tolerance box",
+        ),
+        "budget_leakage": Table(
+            np.array([b.leakage for b in budgets]), axis, "1", "population outside the qubit"
+        ),
+        "verified_worst": Table(
+            np.array(worst), axis, "1", "worst infidelity of the codes, recomputed"
+        ),
+        "verified": Table(
+            np.array([int(v.holds) for v in found.values()]),
+            axis,
+            "1",
+            "1 where every stored figure was found again",
+        ),
+    }
+    return replace(waveform, evidence={**waveform.evidence, **tables})
+
+
+def draw(found: dict[str, Verification], path: str | Path) -> None:
+    """The budgets as a picture; the file's suffix decides the format."""
+    from shaper.figures import budget_figure, save
+
+    sources = [s for s in SOURCES if any(s in v.budget.alone for v in found.values())]
+    bars = {
+        name: [v.budget.alone.get(s, np.nan) for s in sources] + [v.budget.together]
+        for name, v in found.items()
+    }
+    save(budget_figure({"source": [*sources, "all together"], "pulses": bars}), path)
+
+
+def as_json(found: dict[str, Verification]) -> dict:
+    """The verification as plain data."""
+    return {
+        name: {
+            "holds": v.holds,
+            "claims": [
+                {
+                    "name": c.name,
+                    "claimed": c.claimed,
+                    "recomputed": c.found,
+                    "holds": bool(c.holds),
+                }
+                for c in v.claims
+            ],
+            "budget": {source: float(value) for source, value in v.budget.alone.items()},
+            "sum": float(v.budget.total),
+            "together": v.budget.together,
+            "leakage": v.budget.leakage,
+            "adds_up": bool(v.budget.adds_up),
+            "note": v.budget.note,
+            "dominating": v.budget.dominating,
+            "advice": v.budget.advice,
+        }
+        for name, v in found.items()
+    }
+
+
+def _chosen(waveform: Waveform, names: Sequence[str]) -> list[str]:
+    if "all" in names:
+        return list(waveform.pulses)
+    for name in names:
+        if name not in waveform.pulses:
+            raise InputError(
+                f"--pulse: expected one of {', '.join(waveform.pulses)} or all, got {name}"
+            )
+    optimized = [n for n, pulse in waveform.pulses.items() if pulse.origin == "optimized"]
+    return list(names) or optimized or list(waveform.pulses)
+
+
+def _at_qubit(path, samples, sample_rate, cells):
+    if not path.straight:
+        drive, cell = path.at_qubit(samples, sample_rate, cells)
+        return drive, np.full(len(drive), cell)
+    changes = np.flatnonzero(np.any(np.diff(samples, axis=0) != 0, axis=1)) + 1
+    starts = np.concatenate([[0], changes])
+    return samples[starts], np.diff(np.append(starts, len(samples))) / sample_rate
+
+
+def _figures(drive, durations, target, detuning, sides) -> tuple[float, float, float]:
+    """Nominal, mean and worst infidelity by matrix exponentials."""
+
+    rules, even = [], []
+    for half in sides:
+        x, w = np.polynomial.legendre.leggauss(_MEAN_POINTS)
+        rules.append((half * x, w / 2) if half else (np.zeros(1), np.ones(1)))
+        even.append(np.linspace(-half, half, _WORST_POINTS) if half else np.zeros(1))
+
+    def lost(axes):
+        eps, delta = (v.ravel() for v in np.meshgrid(*axes, indexing="ij"))
+        unitaries = independent.gates(drive, durations, eps, detuning + delta)
+        return np.array(
+            [independent.infidelity(independent.superoperator(u), target) for u in unitaries]
+        )
+
+    nominal = float(lost((np.zeros(1), np.zeros(1)))[0])
+    if not any(sides):
+        return nominal, nominal, nominal
+    weight = np.outer(rules[0][1], rules[1][1]).ravel()
+    mean = float(weight @ lost((rules[0][0], rules[1][0])))
+    return nominal, mean, max(float(np.max(lost(even))), nominal)
+
+
+def _agree(claimed: float, found: float) -> bool:
+    return bool(abs(claimed - found) <= RELATIVE * max(claimed, found) + independent.RESOLUTION)

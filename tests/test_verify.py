@@ -1,0 +1,307 @@
+"""The second opinion, the error budget, and the command that prints them."""
+
+import json
+
+import numpy as np
+import pytest
+from scipy.optimize import least_squares
+
+from shaper import rotation
+from shaper.cli import main
+from shaper.drive.line import filtered, first_order, taps
+from shaper.drive.mixer import Calibration
+from shaper.drive.path import Path as BenchPath
+from shaper.errors import InputError
+from shaper.evidence import independent
+from shaper.evidence.budget import Effects, error_budget
+from shaper.evidence.score import score
+from shaper.job import parse_job
+from shaper.physics import decay, noise
+from shaper.physics.propagate import propagate
+from shaper.pulse import Waveform, make_pulse
+from shaper.store import load_waveform, save_waveform
+from shaper.target import Target, infidelity
+from shaper.workflow.verify import check_claims, effects_of, verify, with_evidence
+
+MHZ, NS, US = 2e6 * np.pi, 1e-9, 1e-6
+CLOSE = 1e-12
+FULL = 25 * MHZ
+
+JOB = """
+title = "Quarter-turn phase gate, Alder bench, qubit 1"
+[qubit]
+t1_us = 60.0
+t2_us = 45.0
+anharmonicity_MHz = -210.0
+[drive]
+rabi_max_MHz = 25.0
+sample_rate_MSps = 1000.0
+dac_bits = 10
+[target]
+gate = "z"
+angle_deg = 90.0
+[tolerance]
+amplitude = 0.002
+detuning_MHz = 0.05
+[pulse]
+duration_ns = 60.0
+slice_ns = 1.0
+"""
+
+
+@pytest.fixture(scope="module")
+def job():
+    return parse_job(JOB)
+
+
+@pytest.fixture(scope="module")
+def pulse(job):
+    """A smooth z(90), by scipy's least squares on the scoring propagator."""
+    t = (np.arange(60) + 0.5) / 60
+    modes = np.sin(np.pi * np.outer(np.arange(1, 6), t))
+
+    def drive(x):
+        return 0.5 * FULL * np.tanh((x.reshape(2, 5) @ modes).T)
+
+    def error(x):
+        return job.target.error_rows @ propagate(drive(x), np.full(60, NS), 0.0, 0.0)
+
+    start = np.array([0.9, 0.1, 0.4, 0, 0, -0.3, 0.8, 0.2, 0, 0])
+    found = least_squares(error, start, xtol=1e-15, ftol=1e-15, gtol=1e-15)
+    return make_pulse(
+        drive(found.x),
+        np.ones(60, int),
+        full_scale=FULL,
+        bits=10,
+        bound="circle",
+        sample_rate=1e9,
+        origin="optimized",
+    )
+
+
+@pytest.fixture(scope="module")
+def waveform(job, pulse):
+    return Waveform(
+        title=job.title,
+        job_text=JOB,
+        created="2026-01-01T00:00:00Z",
+        software="test",
+        seed=0,
+        status="converged",
+        target=job.target.quaternion,
+        error_rows=job.target.error_rows,
+        error_scale=job.target.scale,
+        pulses={"shaped": pulse},
+        scores={"shaped": score(pulse, job)},
+    )
+
+
+def test_second_opinion_agrees_on_a_qubit(rng):
+    drive, durations = rng.normal(0, 20 * MHZ, (9, 2)), rng.uniform(1, 3, 9) * NS
+    q = propagate(drive, durations, 0.03, 2 * MHZ)
+    unitary = independent.gate(drive, durations, 0.03, 2 * MHZ)
+    assert np.max(np.abs(unitary - rotation.matrix(q))) < CLOSE
+    grid = independent.gates(drive, durations, np.array([0.0, 0.03]), np.array([0.0, 2 * MHZ]))
+    assert np.max(np.abs(grid[1] - unitary)) < CLOSE
+    begin, end = np.array([0, 0, 1.0]), np.array([0.6, 0, 0.8])
+    for target in (
+        Target(rotation.about_y(0.3)),
+        Target(rotation.about_y(0.3), np.array([0.0, 0.0, 1.0])),
+        Target(rotation.between(begin, end), end, "state"),
+    ):
+        found = independent.infidelity(independent.superoperator(unitary), target)
+        assert found == pytest.approx(infidelity(q, target), abs=CLOSE)
+    small = rotation.product(rotation.about_x(0.02), rotation.about_y(0.3))
+    vector = independent.rotation_error(rotation.matrix(small), Target(rotation.about_y(0.3)))
+    assert vector == pytest.approx([np.sin(0.01), 0, 0], abs=CLOSE)
+
+
+def test_second_opinion_agrees_on_decay(rng):
+    drive, durations = rng.normal(0, 20 * MHZ, (9, 2)), rng.uniform(1, 3, 9) * NS
+    operator = independent.open_gate(drive, durations, 0.01, MHZ, 2, 0.0, 2e-7, 1.5e-7)
+    transfer = decay.transfer_matrix(drive, durations, 0.01, MHZ, 2e-7, 1.5e-7)
+    target = Target(rotation.about_z(1.0))
+    assert independent.infidelity(operator, target) == pytest.approx(
+        decay.average_infidelity(transfer, target), abs=CLOSE
+    )
+    # three levels without decay: the superoperator of the unitary
+    closed = independent.open_gate(drive, durations, 0.0, 0.0, 3, -200 * MHZ, None, None)
+    unitary = independent.gate(drive, durations, 0.0, 0.0, 3, -200 * MHZ)
+    assert np.max(np.abs(closed - independent.superoperator(unitary))) < CLOSE
+    assert independent.leakage(closed) == pytest.approx(
+        np.sum(np.abs(unitary[2, :2]) ** 2) / 2, abs=CLOSE
+    )
+
+
+def test_integrator_follows_the_line(rng):
+    """The continuous waveform and its cell means meet, as the square of the cell."""
+    samples, line = rng.normal(0, 10 * MHZ, (12, 2)), first_order(80e6)
+    until = 12 * NS + line.reach
+    exact = independent.integrated(line, samples, 1e9, until, 0.02, MHZ)
+    gaps = []
+    for cells in (4, 8):
+        kernel = taps(line, NS, cells)
+        drive = filtered(kernel.kernel, samples)
+        durations = np.full(len(drive), NS / cells)
+        unitary = independent.gate(drive, durations, 0.02, MHZ)
+        # the last cell ends a little after the integrator: same z turn afterwards
+        rest = np.sum(durations) - until
+        turn = np.diag(np.exp(-0.5j * MHZ * rest * np.array([1, -1])))
+        gaps.append(np.max(np.abs(turn @ exact - unitary)))
+    assert gaps[1] < 1e-5
+    assert gaps[0] / gaps[1] == pytest.approx(4, abs=0.6)
+
+
+def test_budget_entries_are_the_physics_alone(pulse, job):
+    """Each entry against the room that knows that effect, and the whole within 20 %."""
+    target = job.target
+    spectrum = noise.power_law(1e3, 1.0, 1.0, 1e3, 1e9)
+    effects = Effects(
+        t1=60 * US,
+        t2=45 * US,
+        detuning_sigma=0.05 * MHZ,
+        detuning_spectrum=spectrum,
+        carrier=5e3 * MHZ,
+    )
+    budget = error_budget(pulse, target, effects)
+    played = pulse.played
+    transfer = decay.transfer_matrix(*played, 0.0, 0.0, 60 * US, 45 * US)
+    still = infidelity(propagate(*played, 0.0, 0.0), target)
+    lost = decay.average_infidelity(transfer, target) - still
+    assert budget.alone["decay"] == pytest.approx(lost, abs=CLOSE)
+    slow = noise.quasi_static_infidelity(*played, target, 0.05 * MHZ)
+    assert budget.alone["slow noise"] == pytest.approx(slow, rel=0.05)
+    colored = noise.colored_infidelity(*played, spectrum)
+    assert budget.alone["colored noise"] == pytest.approx(colored)
+    assert budget.alone["quantization"] == pytest.approx(still, rel=1e-3)
+    assert 0 < budget.alone["rotating wave"] < 1e-4
+    assert budget.adds_up
+    assert "add up within 20%" in budget.note
+    assert budget.advice.startswith(budget.dominating)
+
+
+def test_leakage_entry_and_levels(pulse, job):
+    effects = Effects(anharmonicity=-210 * MHZ)
+    budget = error_budget(pulse, job.target, effects)
+    unitary = independent.gate(*pulse.played, 0.0, 0.0, 3, -210 * MHZ)
+    alone = independent.infidelity(independent.superoperator(unitary), job.target)
+    assert budget.together == pytest.approx(alone, abs=CLOSE)
+    assert budget.alone["leakage"] == pytest.approx(alone, rel=0.1)
+    assert budget.dominating == "leakage"
+    assert budget.leakage > 0
+    four = error_budget(pulse, job.target, Effects(anharmonicity=-210 * MHZ, levels=4))
+    assert four.alone["leakage"] == pytest.approx(budget.alone["leakage"], rel=0.2)
+
+
+def test_uncorrected_line_shows_and_interacting_errors_are_named(pulse, job):
+    path = BenchPath(line=first_order(60e6))
+    budget = error_budget(pulse, job.target, Effects(path=path, correction="none"))
+    assert budget.dominating == "line"
+    assert budget.alone["line"] > 1e-4
+    # a tolerance on top pushes the same way at its worst point
+    wide = Effects(path=path, correction="none", amplitude_tolerance=0.03)
+    both = error_budget(pulse, job.target, wide)
+    assert not both.adds_up
+    assert "line and tolerance" in both.note
+    assert both.total + both.crossed["line", "tolerance"] == pytest.approx(both.together, rel=0.05)
+
+
+def test_calibrated_mixer_costs_nothing(pulse, job):
+    """Codes made through the calibration: the claims hold behind the mixer, and only there."""
+    calibration = Calibration(gain=1.04, phase=0.05, offset_i=0.2 * MHZ)
+    path = BenchPath(calibration=calibration)
+    played = path.to_play(np.repeat(pulse.drive, pulse.samples, axis=0), 1e9)
+    through = make_pulse(
+        played,
+        np.ones(60, int),
+        full_scale=FULL,
+        bits=14,
+        bound="circle",
+        sample_rate=1e9,
+        origin="optimized",
+    )
+    through = type(pulse)(**{**through.__dict__, "drive": pulse.drive})
+    claims = score(make_same(pulse, 14), job)
+    good = Effects(path=path, cells=1, amplitude_tolerance=0.002, detuning_tolerance=0.05 * MHZ)
+    budget = error_budget(through, job.target, Effects(path=path, cells=1))
+    assert budget.total < 1e-7
+    ignored = error_budget(through, job.target, Effects())
+    assert ignored.total > 1e-4
+    float_claims = [c for c in check_claims(through, claims, job.target, good) if "float" in c.name]
+    assert all(claim.holds for claim in float_claims)
+
+
+def make_same(pulse, bits):
+    return make_pulse(
+        pulse.drive,
+        pulse.samples,
+        full_scale=FULL,
+        bits=bits,
+        bound="circle",
+        sample_rate=1e9,
+        origin="optimized",
+    )
+
+
+def test_true_claims_hold_and_false_ones_do_not(waveform, job):
+    effects = effects_of(job)
+    pulse, stored = waveform.pulses["shaped"], waveform.scores["shaped"]
+    claims = check_claims(pulse, stored, job.target, effects)
+    assert len(claims) == 6
+    assert all(claim.holds for claim in claims)
+    for field in ("nominal", "dac_mean", "dac_worst"):
+        false = type(stored)(**{**stored.__dict__, field: getattr(stored, field) / 2 + 1e-9})
+        claims = check_claims(pulse, false, job.target, effects)
+        assert sum(not claim.holds for claim in claims) == 1
+    proved = type(stored)(**{**stored.__dict__, "guaranteed": stored.dac_worst * 0.9})
+    assert not check_claims(pulse, proved, job.target, effects)[-1].holds
+
+
+def test_command(tmp_path, waveform, capsys):
+    path = tmp_path / "z90.h5"
+    save_waveform(path, waveform)
+    assert main(["verify", str(path), "--json", "--carrier-GHz", "5"]) == 0
+    printed = capsys.readouterr()
+    result = json.loads(printed.out)["shaped"]
+    assert result["holds"]
+    assert set(result["budget"]) == {
+        "search",
+        "quantization",
+        "rotating wave",
+        "leakage",
+        "decay",
+        "tolerance",
+    }
+    assert "evidence stored" in printed.err
+    evidence = load_waveform(path).evidence
+    assert evidence["budget_together"].values[0] == result["together"]
+    assert evidence["verified"].values[0] == 1
+    assert main(["verify", str(path), "--keep-file", "--figure", str(tmp_path / "b.svg")]) == 0
+    printed = capsys.readouterr()
+    assert "every claim holds" in printed.out
+    assert "dominates" in printed.out
+    assert (tmp_path / "b.svg").stat().st_size > 1000
+
+
+def test_command_on_a_false_file(tmp_path, waveform, capsys):
+    """A file whose figures are too good gets exit code 1 and says which."""
+    stored = waveform.scores["shaped"]
+    false = type(stored)(**{**stored.__dict__, "dac_worst": stored.dac_worst / 3})
+    path = tmp_path / "z90.h5"
+    save_waveform(path, type(waveform)(**{**waveform.__dict__, "scores": {"shaped": false}}))
+    before = path.read_bytes()
+    assert main(["verify", str(path), "--keep-file"]) == 1
+    assert "DOES NOT HOLD" in capsys.readouterr().out
+    assert path.read_bytes() == before
+    assert main(["verify", str(path), "--pulse", "other"]) == 2
+    assert "expected one of shaped or all, got other" in capsys.readouterr().err
+    assert main(["verify", str(path), "--carrier-GHz", "-1"]) == 2
+
+
+def test_verify_from_python(waveform):
+    found = verify(waveform, ["all"])
+    again = with_evidence(waveform, found)
+    assert again.evidence["budget"].values.shape == (1, 10)
+    assert set(again.pulses) == set(waveform.pulses)
+    with pytest.raises(InputError):
+        verify(waveform, ["nothing"])
