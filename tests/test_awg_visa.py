@@ -1,5 +1,6 @@
 """The optional transport: PyVISA with its pure-Python backend, to the same stand-in."""
 
+import subprocess
 import sys
 
 import numpy as np
@@ -35,7 +36,9 @@ def quiet(*args, **kwargs):
 
 
 def test_imported_only_when_asked_for(monkeypatch):
-    monkeypatch.setitem(sys.modules, "pyvisa", None)  # as if it were not installed
+    code = "import sys, shaper.workflow.load; sys.exit('pyvisa' in sys.modules)"
+    assert subprocess.run([sys.executable, "-c", code]).returncode == 0
+    monkeypatch.setattr("importlib.util.find_spec", lambda name: None)  # as if not installed
     with pytest.raises(InputError, match="pip install"):
         open_link("GPIB0::10::INSTR", SOON)
 

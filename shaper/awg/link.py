@@ -8,6 +8,7 @@ block would swallow the next command. The only way back is to close and to open 
 from __future__ import annotations
 
 import contextlib
+import importlib.util
 import select
 import socket
 import time
@@ -217,6 +218,22 @@ def split_address(address: str) -> tuple[str, int]:
     return host, int(port)
 
 
+def is_visa(address: str) -> bool:
+    """Whether the address is a VISA resource."""
+    return "::" in address and not address.startswith("[")
+
+
+def require_address(address: str) -> None:
+    """InputError if the address makes no sense, or needs a package that is not installed."""
+    if not is_visa(address):
+        split_address(address)
+    elif importlib.util.find_spec("pyvisa") is None:
+        raise InputError(
+            f"{address}: expected the packages pyvisa and pyvisa-py for a VISA resource; "
+            "install the extra: pip install 'shaper[visa]'"
+        )
+
+
 def open_link(address: str, seconds: float) -> Link:
     """The transport that the address asks for: VISA if it holds ``::``, else a socket.
 
@@ -224,7 +241,8 @@ def open_link(address: str, seconds: float) -> Link:
         InputError: if the address makes no sense, or needs a package that is not installed.
         LinkError: if the connection cannot be opened.
     """
-    if "::" in address and not address.startswith("["):
+    require_address(address)
+    if is_visa(address):
         from shaper.awg.visa import VisaLink
 
         return VisaLink(address, seconds)

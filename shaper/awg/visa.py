@@ -14,7 +14,6 @@ import time
 import warnings
 
 from shaper.awg.link import LinkError, Reader
-from shaper.errors import InputError
 
 _CHUNK = 1 << 20  # bytes in one transfer
 _MESSAGE_LIMIT = 1 << 30  # bytes of one answer on a link that marks its end
@@ -32,16 +31,10 @@ class VisaLink(Reader):
         a closed port without a word.
 
         Raises:
-            InputError: if PyVISA is missing or the resource name makes no sense.
             LinkError: if it cannot be opened.
         """
-        try:
-            import pyvisa
-        except ImportError as error:
-            raise InputError(
-                f"{address}: expected the packages pyvisa and pyvisa-py for a VISA resource; "
-                "install the extra: pip install 'shaper[visa]'"
-            ) from error
+        import pyvisa
+
         self.address = address
         self._visa = pyvisa
         self._by_count = address.upper().endswith("::SOCKET")

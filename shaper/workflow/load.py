@@ -10,7 +10,7 @@ from pathlib import Path
 from shaper.awg import output
 from shaper.awg.files import read_file, sha256
 from shaper.awg.folder import write_folder
-from shaper.awg.link import open_link
+from shaper.awg.link import open_link, require_address
 from shaper.awg.load import begin_record, load
 from shaper.awg.plan import Choice, Plan, make_plan
 from shaper.awg.profile import Profile, read_profile
@@ -198,6 +198,7 @@ def load_into_instrument(
     Raises:
         ShaperError: its kind says what failed; the record is written in every case.
     """
+    require_address(address)
     record_path = Path(record_path)
     earlier = [r for r in records_in(record_path.parent) if r["address"] == address]
     if not any(_is_today(r) for r in earlier):
@@ -289,6 +290,7 @@ def switch_output_on(
         SafetyError: not this instrument, not this waveform, a limit, or no word.
         ShaperError: everything else.
     """
+    require_address(address)
     loaded = read_record(record_path)
     output.require_loaded(loaded, address)
     profile, fingerprint = read_profile(profile_path)
@@ -333,6 +335,7 @@ def switch_output_off(address: str, profile_path: str | Path | None = None) -> s
     Raises:
         ShaperError: if it has not; the text says so.
     """
+    require_address(address)
     profile = read_profile(profile_path)[0] if profile_path else output.standard_profile()
     record = LoadRecord(None, address=address, pulses=[], traces=[])
     return output.switch_off(profile, lambda: open_link(address, profile.link.timeout_s), record)
