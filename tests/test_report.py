@@ -11,7 +11,8 @@ import pytest
 from report_case import make_case
 
 from shaper.cli import main
-from shaper.figures import DARK, LIGHT
+from shaper.evidence.budget import Budget
+from shaper.figures import DARK, LIGHT, budget_figure
 from shaper.job import parse_job
 from shaper.physics.propagate import propagate
 from shaper.report.parts import typeset
@@ -19,7 +20,8 @@ from shaper.store import save_waveform
 from shaper.target import infidelity
 from shaper.workflow.compare import as_json, compare
 from shaper.workflow.notebook import attach, comparison_html, waveform_html
-from shaper.workflow.report import live_data, make_report
+from shaper.workflow.report import budget_table, live_data, make_report
+from shaper.workflow.verify import Claim, Verification, with_evidence
 
 ROUND_OFF = 1e-14  # both sides compute the same sum of squares of unit quaternions
 
@@ -167,6 +169,26 @@ def test_a_file_with_one_pulse_and_no_history_has_a_page():
     object.__setattr__(case, "history", {})
     text = make_report(case)
     assert ">Search<" not in text
+
+
+def test_the_stored_budget_is_drawn_and_the_second_opinion_told(without_pictures):
+    case = make_case()
+    assert budget_table(case) is None
+    assert "verified</dt><dd>not yet" in make_report(case)
+    claims = (Claim("codes, worst", 1e-3, 2e-3, False),)
+    found = {
+        "shaped": Verification((), Budget({"line": 1e-5, "decay": 2e-4}, 3e-4, 0.0, {})),
+        "bb1": Verification(claims, Budget({"line": 3e-5, "leakage": 1e-6}, 5e-5, 0.0, {})),
+    }
+    checked = with_evidence(case, found)
+    table = budget_table(checked)
+    assert table["source"] == ["line", "leakage", "decay", "all together"]
+    np.testing.assert_array_equal(table["pulses"]["shaped"], [1e-5, np.nan, 2e-4, 3e-4])
+    np.testing.assert_array_equal(table["pulses"]["bb1"], [3e-5, 1e-6, np.nan, 5e-5])
+    assert "NOT CONFIRMED" in make_report(checked)
+    del found["bb1"]
+    assert "found again" in make_report(with_evidence(case, found))
+    budget_figure(table)
 
 
 def test_the_verdict_stands_first(page):

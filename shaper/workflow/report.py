@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable, Sequence
 
 import numpy as np
@@ -64,6 +65,7 @@ def make_report(waveform: Waveform, name: str = "", against: Sequence[str] = ())
                 "software": waveform.software,
                 "seed": str(waveform.seed),
                 "search ended": waveform.status,
+                **_verified(waveform),
             },
         )
     )
@@ -89,6 +91,16 @@ def _facts(comparison: Comparison, facts: dict) -> dict[str, str]:
             f"at least {figures.scientific(limited)} in {facts['duration_ns']:g} ns"
         )
     return terms
+
+
+def _verified(waveform: Waveform) -> dict[str, str]:
+    """What ``verify`` found, if it was run on this file."""
+    table = waveform.evidence.get("verified")
+    if table is None:
+        return {"verified": "not yet: shaper verify recomputes the file by independent means"}
+    if np.all(np.asarray(table.values) == 1):
+        return {"verified": "every figure found again by independent means"}
+    return {"verified": "NOT CONFIRMED: figures in the file do not hold"}
 
 
 # --- the live panel ---------------------------------------------------------------------------
@@ -217,6 +229,17 @@ def _pictures(waveform: Waveform, comparison: Comparison) -> list[Picture]:
                 ),
             )
         )
+    budget = budget_table(waveform)
+    if budget is not None:
+        pictures.append(
+            _drawn(
+                "Error budget",
+                "Infidelity by each effect alone, and by all at once at the worst point of the "
+                "tolerance box.",
+                f"Error budget of {' and '.join(budget['pulses'])}, recomputed independently.",
+                lambda theme: figures.budget_figure(budget, theme=theme),
+            )
+        )
     pictures.append(
         _drawn(
             "Way of the Bloch vector",
@@ -240,6 +263,29 @@ def _drawn(
         figures.encoded(draw(theme), ".svg", theme) for theme in (figures.LIGHT, figures.DARK)
     )
     return Picture(heading, caption, alternative, light, dark, paper_only)
+
+
+def budget_table(waveform: Waveform) -> dict | None:
+    """The budget that ``verify`` stored, as ``figures.budget_figure`` takes it; None: not there.
+
+    Rows and columns are named in the table's own description.
+    """
+    table, together = (waveform.evidence.get(k) for k in ("budget", "budget_together"))
+    named = table and re.search(r"pulses: (.*); sources: (.*)$", table.long_name)
+    if not named or together is None:
+        return None
+    pulses, sources = (part.split(", ") for part in named.groups())
+    values = np.asarray(table.values, dtype=float)
+    if values.shape != (len(pulses), len(sources)):
+        return None
+    asked = [k for k in range(len(sources)) if not np.all(np.isnan(values[:, k]))]
+    return {
+        "source": [*(sources[k] for k in asked), "all together"],
+        "pulses": {
+            name: [*row[asked], whole]
+            for name, row, whole in zip(pulses, values, together.values, strict=True)
+        },
+    }
 
 
 def _history(waveform: Waveform) -> dict | None:
