@@ -211,7 +211,7 @@ def test_time_optimal_against_published(q, duration, rate, phase):
 
 
 @settings(deadline=None, max_examples=60)
-@given(theta=st.floats(1e-6, math.pi), sign=st.sampled_from([1, -1]))
+@given(theta=st.floats(1e-6, 3.14), sign=st.sampled_from([1, -1]))
 def test_time_optimal_z_closed_form(theta, sign):
     """sqrt(theta (4 pi - theta)), phase rate against the sense of the turn."""
     found = time_optimal(Target(rotation.about_z(sign * theta)))
@@ -279,6 +279,24 @@ def test_twenty_random_targets_under_the_box(rng):
         found = shortest_box(target)
         assert infidelity(found.quaternion, target) < EXACT
         assert length(found, "box") <= length(sandwich(target, "box"), "box") * (1 + 1e-12)
+
+
+@settings(deadline=None, max_examples=8)
+@given(q=unit_quaternions, bound=st.sampled_from(["circle", "box"]))
+def test_one_turn_is_enough_with_a_free_axis_or_an_axis_in_the_plane(q, bound):
+    free = Target(q, np.array([0.0, 0.0, 1.0]))
+    found = sandwich(free, bound)
+    assert infidelity(found.quaternion, free) < EXACT
+    expected = 2 * math.asin(min(1.0, math.hypot(q[1], q[2])))
+    if bound == "circle":  # asin near a half turn loses half the digits
+        assert length(found, bound) == pytest.approx(expected, abs=1e-7)
+    assert length(found, bound) >= limit(free, bound) * (1 - 1e-9)
+    flat = Target(rotation.from_axis_angle((q[0], 0.3 + abs(q[1]), 0.0), 2.0))
+    assert sandwich(flat, "circle").angles == pytest.approx([2.0])
+    end = rotation.bloch_matrix(q) @ [0.0, 0.6, 0.8]
+    state = Target(rotation.between((0.0, 0.6, 0.8), end), end, "state")
+    assert infidelity(sandwich(state, bound).quaternion, state) < EXACT
+    assert length(sandwich(state, bound), bound) >= limit(state, bound) * (1 - 1e-9)
 
 
 def test_a_free_axis_takes_the_shortest_member():

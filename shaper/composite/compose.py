@@ -32,11 +32,7 @@ _TWO_PULSE = "two half turns make a turn: O. Rodrigues, J. Math. Pures Appl. 5, 
 
 
 def single(target: Target, bound: str) -> Sequence:
-    """The uncorrected way: one rotation if its axis lies in the xy plane, else the sandwich."""
-    w, x, y, z = canonical(target.quaternion)
-    if target.free_axis is None and abs(z) < _IN_PLANE:
-        angle = 2 * math.atan2(math.hypot(x, y), w)
-        return from_turns([(angle, math.atan2(y, x))], "", "plain")
+    """The uncorrected way: one turn about an axis in the xy plane if that does, or the sandwich."""
     return dataclasses.replace(sandwich(target, bound), name="plain")
 
 

@@ -12,10 +12,12 @@ import numpy as np
 
 from shaper.composite.free_turn import shortest_over_free_turn
 from shaper.composite.sequence import Sequence, from_turns, length
-from shaper.rotation import about_z, conjugate, euler_yxy, product
+from shaper.rotation import about_z, canonical, conjugate, euler_yxy, product
 from shaper.target import Target
 
 _DEGENERATE = 1e-11  # rad; so close to 0 or pi the middle turn leaves only a + c or a - c fixed
+_IN_PLANE = 1e-12  # z component of a rotation whose axis is taken to lie in the xy plane
+_LEVEL = 1e-9  # relative; of ways of one length the one turn is taken
 _SOURCE = "Euler angles; every one-qubit gate is y, x, y: Nielsen and Chuang, theorem 4.1"
 _TURNS = {"circle": (0.0,), "box": (0.0, math.pi / 4, -math.pi / 4)}
 
@@ -25,7 +27,8 @@ def sandwich(target: Target, bound: str) -> Sequence:
 
     For z(theta) it is ``y(+90) x(theta) y(-90)``, theta wrapped to the shortest turn. In the box
     the axes are turned by 45 degrees, both quadratures at their bound, where that is shorter. With
-    a free axis the shortest member is taken. A target that doing nothing meets has no arcs.
+    a free axis the shortest member is taken. Where one turn about an axis in the xy plane does,
+    and is not longer, it is that. A target that doing nothing meets has no arcs.
 
     Args:
         target: what to do.
@@ -38,9 +41,27 @@ def sandwich(target: Target, bound: str) -> Sequence:
     """
     if target.needs_no_pulse:
         return Sequence(np.zeros(0), np.zeros(0), _SOURCE, "sandwich")
-    return shortest_over_free_turn(
+    three = shortest_over_free_turn(
         target, lambda q: _shortest(q, bound), lambda sequence: length(sequence, bound)
     )
+    one = one_turn(target)
+    if one is not None and length(one, bound) <= length(three, bound) * (1 + _LEVEL):
+        return one
+    return three
+
+
+def one_turn(target: Target) -> Sequence | None:
+    """The target as a single turn about an axis in the xy plane, where there is one.
+
+    With a free axis there always is: its turn can cancel the z component of the rotation.
+    """
+    q = target.quaternion
+    if target.free_axis is not None:
+        q = target.member(2 * math.atan2(-q[3], target.member(math.pi)[3]))
+    w, x, y, z = canonical(q)
+    if abs(z) > _IN_PLANE:
+        return None
+    return from_turns([(2 * math.atan2(math.hypot(x, y), w), math.atan2(y, x))], "", "sandwich")
 
 
 def _shortest(q: np.ndarray, bound: str) -> Sequence:
