@@ -123,8 +123,10 @@ class PulseSection(Section):
 class Search(Section):
     """How the waveform is looked for; all optional."""
 
-    starts: int = Field(16, ge=1, le=4096, description="number of starting waveforms")
-    iterations: int = Field(500, ge=1, le=1_000_000, description="most steps of each start")
+    starts: int = Field(32, ge=1, le=4096, description="number of starting waveforms")
+    iterations: int = Field(
+        100, ge=1, le=1_000_000, description="most exploring steps of each start"
+    )
     seed: int = Field(0, ge=0, le=2**31 - 1, description="of the random starts")
     minimize: Literal["worst", "mean"] = Field("worst", description="over the tolerance box")
     stop_infidelity: Annotated[float, Field(gt=0, lt=1)] | None = Field(

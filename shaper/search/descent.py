@@ -1,19 +1,26 @@
 """The search: many starts side by side, first for the mean over the box, then for its worst point.
 
 The mean is smooth and leads far down; the worst case is what counts. So all starts go down the
-mean on a coarse grid, and the best few then climb the ladder of powers on a finer one, the power
-mean closing in on the maximum. At the end all that are left are measured on the score's own grid.
+mean on the coarsest grid that still leads somewhere, the best go on on a finer one, and the best of
+these climb the ladder of powers, whose mean closes in on the maximum, on grids fine enough that
+nothing hides between their points. What is left is measured on the grid on which pulses are
+scored.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from shaper.bench import error_grid, score_grid
+from shaper.drive.bound import quadratures
 from shaper.job import Job
+from shaper.search import gauss_newton, quasi_newton
+from shaper.search.compiler import prepare
+from shaper.search.objective import Problem, all_infidelities, make_problem
+from shaper.search.starts import starting_parameters
 
 STATUSES = {
     "converged": "reached stop_infidelity",
@@ -22,16 +29,50 @@ STATUSES = {
     "interrupted": "stopped by hand: what was best is kept",
     "nonfinite": "the infidelity is not a number: check the job's sizes",
 }
-EXPLORE_POINTS = (5, 7)  # amplitude, detuning: Gauss-Lobatto
-POLISH_POINTS = (7, 11)
-POWERS = (2.0, 4.0, 8.0, 16.0, 32.0, 64.0)
-POLISHED = 8  # starts that are polished
-POLISH_STEPS = 40  # for each power
 CHUNK = 10  # steps between two looks at progress, interruption and convergence
 STALL_CHUNKS = 3  # chunks of a relative gain below STALL_GAIN, and a start counts as stalled
 STALL_GAIN = 1e-3
 
+
+@dataclass(frozen=True)
+class Stage:
+    """A leg of the search.
+
+    Attributes:
+        name: for the progress line.
+        points: of the Gauss-Lobatto grid along amplitude and detuning.
+        kept: number of starts that take part, the best ones; all if None.
+        powers: of the mean, one after the other.
+        steps: for each power; the job's iterations if None.
+    """
+
+    name: str
+    points: tuple[int, int]
+    kept: int | None
+    powers: tuple[float, ...]
+    steps: int | None
+
+
+EXPLORE = Stage("exploring", (3, 5), None, (1.0,), None)
+REFINE = Stage("refining", (7, 11), 6, (1.0, 4.0, 16.0), 40)
+FINISH = Stage("finishing", (11, 15), 2, (64.0, 256.0), 40)
+LARGEST_JACOBIAN = 3e7  # doubles, all starts together; beyond it quasi-Newton steps are taken
+MEASURED = 8  # starts that are measured on the score's grid at the end
+
 Progress = Callable[[str, int, int, float], None]  # stage, step, of how many, best infidelity
+
+
+@dataclass(frozen=True)
+class Leg:
+    """What one stage did.
+
+    Attributes:
+        starts: [kept] indices of the starts that took part.
+        infidelity: [kept, step] the power mean over the stage's grid after each step.
+    """
+
+    starts: np.ndarray
+    infidelity: np.ndarray
 
 
 @dataclass(frozen=True)
@@ -40,21 +81,40 @@ class Found:
 
     Attributes:
         drive: [slice, 2] rad/s, within the bound.
+        infidelity: of it, on the score's grid: worst, or mean if that was minimized.
         status: of the best start; a key of ``STATUSES``.
         names: of the starts' origins.
         statuses: of every start.
-        infidelity: [start] of every start when it was last looked at, worst over its grid.
-        history: [start, step] mean infidelity over the exploring grid after each step.
         best: index of the start that won.
+        history: stage name to what it did.
     """
 
     drive: np.ndarray
+    infidelity: float
     status: str
     names: list[str]
     statuses: list[str]
-    infidelity: np.ndarray
-    history: np.ndarray
     best: int
+    history: dict[str, Leg]
+
+
+def method_for(problem: Problem, starts: int):
+    """The room with the steps that suit the size: Gauss-Newton unless its jacobians grow too big.
+
+    Measured on robust z rotations: a Gauss-Newton step leads as far as some hundred quasi-Newton
+    steps and costs as much as ten, as long as there are a few hundred error components.
+    """
+    size = problem.residuals * 2 * problem.slices * starts
+    return gauss_newton if size <= LARGEST_JACOBIAN else quasi_newton
+
+
+def stages(job: Job) -> tuple[Stage, ...]:
+    """The legs of this job's search."""
+    if not job.has_tolerance:
+        return (EXPLORE,)
+    if job.minimize == "mean":
+        return (EXPLORE, replace(REFINE, powers=(1.0,)))
+    return (EXPLORE, REFINE, FINISH)
 
 
 def search(
@@ -72,112 +132,105 @@ def search(
         the winner and what became of every start. The same job gives the same result, bit for
         bit, on the same machine and library versions.
     """
-    from shaper.search.compiler import prepare
-
     prepare()
-    from shaper.search.starts import starting_parameters
-
     parameters, names = starting_parameters(job)
-    run = _Run(job, progress or (lambda *_: None), stop or (lambda: False))
-    parameters, worst, history, statuses = run.explore(parameters)
-    if job.has_tolerance and job.minimize == "worst" and not run.ended:
-        chosen = np.argsort(history[:, -1] if history.size else worst)[:POLISHED]
-        polished, polished_worst = run.polish(parameters[chosen])
-        parameters[chosen], worst[chosen] = polished, polished_worst
-    order = np.argsort(worst)[:POLISHED]
-    score = run.measured(parameters[order])
-    best = int(order[np.argmin(score)])
-    worst[order] = score
-    for k in range(len(names)):
-        if not np.isfinite(worst[k]):
-            statuses[k] = "nonfinite"
-        elif job.stop_infidelity is not None and worst[k] <= job.stop_infidelity:
-            statuses[k] = "converged"
-    status = statuses[best]
-    if run.interrupted and status != "converged":
-        status = "interrupted"
-    return Found(run.drive(parameters[best]), status, names, statuses, worst, history, best)
+    run = _Run(job, parameters, progress or (lambda *_: None), stop or (lambda: False))
+    chosen = np.arange(len(names))
+    for stage in stages(job):
+        chosen = chosen[: stage.kept]
+        chosen = run.leg(stage, chosen)
+        if run.interrupted or run.reached:
+            break
+    return run.found(names)
 
 
 class _Run:
-    """One search under way: the compiled programs, and the reasons to end it."""
+    """One search under way: where the starts stand, what was best, and why it should end."""
 
-    def __init__(self, job: Job, progress: Progress, stop: Callable[[], bool]):
+    def __init__(self, job: Job, parameters: np.ndarray, progress: Progress, stop):
         self.job, self.progress, self.stop = job, progress, stop
+        self.parameters = parameters
+        self.status = np.full(len(parameters), "step_limit", dtype=object)
         self.interrupted = self.reached = False
+        self.history: dict[str, Leg] = {}
+        self.best = (np.inf, 0, parameters[0])  # score, start, parameters
+        self._score_problem = make_problem(job, score_grid(job))
 
-    @property
-    def ended(self) -> bool:
-        return self.interrupted or self.reached
+    def leg(self, stage: Stage, chosen: np.ndarray) -> np.ndarray:
+        """One stage for the chosen starts; returns them, the best first."""
+        problem = make_problem(self.job, error_grid(self.job, *stage.points))
+        method = method_for(problem, len(chosen))
+        steps = stage.steps or self.job.iterations
+        costs, done = [], 0
+        for power in stage.powers:
+            state = method.begin(problem, self.parameters[chosen], power)
+            if not costs:
+                costs.append(np.asarray(state.cost)[None])
+                self._look(stage, 0, steps * len(stage.powers), chosen, state)
+            idle, end = np.zeros(len(chosen), dtype=int), done + steps
+            while done < end and not (self.interrupted or self.reached):
+                state, cost = method.advance(problem, state, power, min(CHUNK, steps))
+                gain = np.asarray(state.cost) - costs[-1][-1]
+                costs.append(np.asarray(cost))
+                idle = np.where(-gain < STALL_GAIN, idle + 1, 0)
+                done += len(cost)
+                self._look(stage, done, steps * len(stage.powers), chosen, state)
+                if np.all(idle >= STALL_CHUNKS):
+                    break
+            self.parameters[chosen] = np.asarray(state.parameters)
+            stalled, lost = idle >= STALL_CHUNKS, ~np.isfinite(np.asarray(state.cost))
+            self.status[chosen] = np.where(stalled, "stalled", "step_limit")
+            self.status[chosen[lost]] = "nonfinite"
+            order = np.argsort(self._remember(chosen, power))  # nan last
+        self.history[stage.name] = Leg(chosen, np.exp(np.concatenate(costs)).T)
+        return chosen[order]
 
-    def _look(self, stage: str, done: int, total: int, worst: np.ndarray) -> None:
-        best = float(np.nanmin(worst))
-        self.progress(stage, done, total, best)
+    def _look(self, stage: Stage, done: int, total: int, chosen: np.ndarray, state) -> None:
+        """Progress, interruption, and whether the goal is reached on the score's grid too."""
+        found = np.asarray(state.worst if self._worst_counts else np.exp(state.cost))
+        leader = int(np.nanargmin(found)) if np.any(np.isfinite(found)) else 0
+        self.progress(stage.name, done, total, float(found[leader]))
         self.interrupted = self.interrupted or self.stop()
         goal = self.job.stop_infidelity
-        self.reached = goal is not None and best <= goal
+        if goal is not None and found[leader] <= goal:
+            self.parameters[chosen] = np.asarray(state.parameters)
+            self._remember(chosen[leader : leader + 1], power=1.0)
+            self.reached = self.best[0] <= goal
 
-    def explore(self, parameters: np.ndarray):
-        """All starts down the mean over the coarse grid."""
-        from shaper.search import gauss_newton
-        from shaper.search.objective import make_problem
+    @property
+    def _worst_counts(self) -> bool:
+        return self.job.minimize == "worst" or self.job.stop_infidelity is not None
 
-        problem = make_problem(self.job, error_grid(self.job, *EXPLORE_POINTS))
-        state = gauss_newton.begin(problem, parameters, 1.0)
-        costs = [np.asarray(state.cost)[None]]
-        steps = self.job.iterations
-        self._look("exploring", 0, steps, np.asarray(state.worst))
-        idle = np.zeros(len(parameters), dtype=int)
-        done = 0
-        while done < steps and not self.ended and not np.all(idle >= STALL_CHUNKS):
-            state, cost = gauss_newton.advance(problem, state, 1.0, CHUNK)
-            gain = costs[-1][-1] - np.asarray(cost)[-1]
-            idle = np.where(gain < STALL_GAIN, idle + 1, 0)
-            costs.append(np.asarray(cost))
-            done += CHUNK
-            self._look("exploring", done, steps, np.asarray(state.worst))
-        statuses = ["stalled" if k >= STALL_CHUNKS else "step_limit" for k in idle]
-        history = np.exp(np.concatenate(costs)).T
-        return np.array(state.parameters), np.array(state.worst), history, statuses
+    def _remember(self, starts: np.ndarray, power: float) -> np.ndarray:
+        """Score these starts as they stand, and keep the best ever seen.
 
-    def polish(self, parameters: np.ndarray):
-        """The best few up the ladder of powers on the finer grid."""
-        from shaper.search import gauss_newton
-        from shaper.search.objective import make_problem
+        Returns:
+            [start] what to rank them by: the mean over the score's grid while the mean is being
+            lowered, which tells better how far a start will come, else the score itself.
+        """
+        padded = np.resize(starts, -(-len(starts) // MEASURED) * MEASURED)
+        found = np.concatenate(
+            [  # batches of one size: one compiled program
+                np.asarray(all_infidelities(self._score_problem, self.parameters[batch]))
+                for batch in padded.reshape(-1, MEASURED)
+            ]
+        )[: len(starts)]
+        mean = found @ np.asarray(self._score_problem.weight)
+        score = found.max(axis=1) if self._worst_counts else mean
+        leader = int(np.argmin(np.where(np.isfinite(score), score, np.inf)))
+        if score[leader] < self.best[0]:
+            start = int(starts[leader])
+            self.best = (float(score[leader]), start, self.parameters[start].copy())
+        return mean if power == 1 else score
 
-        problem = make_problem(self.job, error_grid(self.job, *POLISH_POINTS))
-        total = POLISH_STEPS * len(POWERS)
-        best = parameters.copy()
-        best_worst = np.full(len(parameters), np.inf)
-        done = 0
-        for power in POWERS:
-            state = gauss_newton.begin(problem, best, power)
-            for _ in range(POLISH_STEPS // CHUNK):
-                state, _ = gauss_newton.advance(problem, state, power, CHUNK)
-                done += CHUNK
-                worst = np.asarray(state.worst)
-                better = worst < best_worst
-                best[better] = np.asarray(state.parameters)[better]
-                best_worst = np.where(better, worst, best_worst)
-                self._look("polishing", done, total, best_worst)
-                if self.ended:
-                    return best, best_worst
-        return best, best_worst
-
-    def drive(self, parameters: np.ndarray) -> np.ndarray:
-        """[*batch, slice, 2] rad/s."""
-        from shaper.drive.bound import quadratures
-
-        return np.asarray(quadratures(parameters, self.job.bound)) * self.job.rabi_max
-
-    def measured(self, parameters: np.ndarray) -> np.ndarray:
-        """[start]: worst (or mean) infidelity on the grid on which pulses are scored."""
-        import jax
-
-        from shaper.search.objective import infidelities, make_problem
-
-        problem = make_problem(self.job, score_grid(self.job))
-        found = np.asarray(jax.jit(jax.vmap(infidelities, (None, 0)))(problem, parameters))
-        if self.job.minimize == "mean":
-            return found @ np.asarray(problem.weight)
-        return found.max(axis=1)
+    def found(self, names: list[str]) -> Found:
+        """The best ever seen, and what became of every start."""
+        score, start, parameters = self.best
+        goal = self.job.stop_infidelity
+        if goal is not None and score <= goal:
+            self.status[start] = "converged"
+        elif self.interrupted:
+            self.status[start] = "interrupted"
+        drive = np.asarray(quadratures(parameters, self.job.bound)) * self.job.rabi_max
+        statuses = [str(s) for s in self.status]
+        return Found(drive, score, statuses[start], names, statuses, start, self.history)

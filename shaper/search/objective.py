@@ -67,11 +67,11 @@ def make_problem(job: Job, grid: Grid) -> Problem:
     reach = np.hypot(rate, np.max(np.abs(grid.delta)) / job.rabi_max)
     step = job.slice_duration * job.rabi_max
     return Problem(
-        durations=jnp.full(job.slices, step),
-        eps=jnp.asarray(grid.eps),
-        delta=jnp.asarray(grid.delta / job.rabi_max),
-        weight=jnp.asarray(grid.weight),
-        rows=jnp.asarray(rows),
+        durations=np.full(job.slices, step),
+        eps=grid.eps,
+        delta=grid.delta / job.rabi_max,
+        weight=grid.weight,
+        rows=rows,
         bound=job.bound,
         longest_turn=_rounded_up(float(reach * step)),
     )
@@ -82,14 +82,24 @@ def _rounded_up(turn: float) -> float:
     return float(2 ** (np.ceil(4 * np.log2(turn)) / 4))
 
 
-def infidelities(problem: Problem, parameters: Array) -> Array:
-    """[grid] unitless: the infidelity at each grid point; parameters [slice, 2] rad."""
+def rotation_errors(problem: Problem, parameters: Array) -> Array:
+    """[row, grid] unitless: ``rows q`` at each grid point; parameters [slice, 2] rad."""
     drive = quadratures(parameters, problem.bound)
     q = two_level.propagate(
         drive, problem.durations, problem.eps, problem.delta, problem.longest_turn
     )
-    errors = sum(problem.rows[:, i] * q[i] for i in range(4))
-    return jnp.sum(errors * errors, axis=0)
+    return sum(problem.rows[:, i] * q[i] for i in range(4))
+
+
+def infidelities(problem: Problem, parameters: Array) -> Array:
+    """[grid] unitless: the infidelity at each grid point; parameters [slice, 2] rad."""
+    return jnp.sum(rotation_errors(problem, parameters) ** 2, axis=0)
+
+
+@jax.jit
+def all_infidelities(problem: Problem, parameters: Array) -> Array:
+    """[start, grid] unitless, for parameters [start, slice, 2] rad; one compiled program."""
+    return jax.vmap(infidelities, (None, 0))(problem, parameters)
 
 
 def log_power_mean(infidelity: Array, weight: Array, power: Array | float) -> Array:
