@@ -10,6 +10,8 @@ from matplotlib.lines import Line2D
 
 from shaper.figures import style
 
+_LOWEST_SHOWN = 1e-12  # no bench can tell it from nothing
+
 
 @style.drawn
 def budget_figure(budget: Mapping, *, theme: style.Theme = style.LIGHT) -> Figure:
@@ -24,11 +26,12 @@ def budget_figure(budget: Mapping, *, theme: style.Theme = style.LIGHT) -> Figur
     ax = figure.subplots()
     seen = np.concatenate([np.ravel(style.positive(v)) for v in pulses.values()])
     room = np.array([0.5, 4.0])  # for the stem of the smallest and the number beside the largest
-    lowest, _ = style.log_infidelity_axis(ax, np.outer(seen, room), axis="x")
+    lowest, _ = style.log_infidelity_axis(ax, np.outer(seen, room), "x", _LOWEST_SHOWN)
     gap = 0.7 / len(pulses)
     for j, (name, values) in enumerate(pulses.items()):
         where = np.arange(len(sources)) + (j - (len(pulses) - 1) / 2) * gap
         shown = style.positive(values)
+        shown[shown <= lowest] = np.nan  # told in words
         ax.hlines(
             where,
             lowest,
@@ -47,8 +50,11 @@ def budget_figure(budget: Mapping, *, theme: style.Theme = style.LIGHT) -> Figur
             color=pen[name].color,
             zorder=3,
         )
-        for y, value in zip(where, shown, strict=True):
-            text, x = (style.scientific(value), value) if np.isfinite(value) else ("none", lowest)
+        for y, value in zip(where, np.asarray(values, dtype=float), strict=True):
+            if value > lowest:
+                text, x = style.scientific(value), value
+            else:
+                text, x = f"below {style.decade(lowest)}" if value > 0 else "none", lowest
             ax.annotate(
                 text, (x, y), xytext=(6, 0), textcoords="offset points", va="center", fontsize=7.5
             )

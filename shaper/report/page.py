@@ -229,7 +229,7 @@ def _live(live: Mapping) -> str:
     return f"""<section id="live" class="screen-only" aria-labelledby="live-heading" hidden>
 <h2 id="live-heading">Try an error</h2>
 <p>Move the errors and see what they do to the Bloch vector and to the gate. Computed in this page
-from the DAC codes; circle: start, cross: end.</p>
+from the DAC codes, on two levels and without decay. Circle: start, cross: end.</p>
 <div class="controls">{controls}
 <div><label for="start">Start state</label><select id="start" autocomplete="off">{starts}</select>
 </div>
