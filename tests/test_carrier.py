@@ -5,7 +5,11 @@ import pytest
 from scipy.optimize import brentq
 
 from shaper import rotation
-from shaper.physics.carrier import bloch_siegert_shift, propagate_with_carrier
+from shaper.physics.carrier import (
+    bloch_siegert_shift,
+    propagate_with_carrier,
+    propagate_with_shift,
+)
 from shaper.physics.propagate import propagate
 
 
@@ -52,9 +56,23 @@ def test_far_carrier_is_the_rotating_frame(rng):
     assert gaps[1] < gaps[0] / 2  # falls as 1/carrier, with an oscillating factor
 
 
-def test_shifted_rotating_frame_is_closer():
-    """On a long smooth pulse the leading shift explains most of the gap."""
-    n, length, carrier = 200, 60.0, 12.0
+def test_shift_and_kicks_explain_the_gap(rng):
+    """With the first-order terms in, what is left falls as the square of the carrier."""
+    drive, durations = rng.normal(0, 1.0, (6, 2)), rng.uniform(0.5, 1.5, 6)
+    left, plain = [], []
+    for carrier in (40.0, 160.0):
+        lab = propagate_with_carrier(drive, durations, carrier, eps=0.05, delta=0.2, phase=0.7)
+        first = propagate_with_shift(drive, durations, carrier, eps=0.05, delta=0.2, phase=0.7)
+        left.append(angle_between(lab, first))
+        plain.append(angle_between(lab, propagate(drive, durations, 0.05, 0.2)))
+    assert left[0] < 0.1 * plain[0]
+    assert left[1] < 0.03 * plain[1]
+    assert 8 < left[0] / left[1] < 32
+
+
+def test_smooth_pulse_feels_the_shift_alone():
+    """Without jumps the rotating frame with |W|^2/(4 w) added is the lab frame."""
+    n, length, carrier = 400, 60.0, 12.0
     t = (np.arange(n) + 0.5) / n
     drive = np.stack([0.35 * np.sin(np.pi * t) ** 2, 0.1 * np.sin(2 * np.pi * t)], axis=1)
     durations = np.full(n, length / n)

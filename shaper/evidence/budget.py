@@ -45,7 +45,8 @@ REMEDIES = {
     "decay": "a shorter pulse: nothing else shortens the exposure",
     "slow noise": "a pulse searched over a wider detuning tolerance",
     "colored noise": "a shorter pulse, or one whose filter function is low where the noise is",
-    "rotating wave": "a lower Rabi rate, or a carrier offset by the Bloch-Siegert shift",
+    "rotating wave": "edges that rise and fall smoothly, then a carrier moved by the "
+    "Bloch-Siegert shift",
     "tolerance": "a longer pulse, or a tighter calibration",
 }
 _GRID_POINTS = 9  # per axis of the tolerance box
