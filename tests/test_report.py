@@ -20,7 +20,8 @@ from shaper.store import save_waveform
 from shaper.target import infidelity
 from shaper.workflow.compare import as_json, compare
 from shaper.workflow.notebook import attach, comparison_html, waveform_html
-from shaper.workflow.report import budget_table, live_data, make_report
+from shaper.workflow.pictures import budget_table
+from shaper.workflow.report import live_data, make_report
 from shaper.workflow.verify import Claim, Verification, with_evidence
 
 ROUND_OFF = 1e-14  # both sides compute the same sum of squares of unit quaternions
@@ -81,7 +82,7 @@ def test_nothing_points_outside_and_nothing_is_styled_in_place(page):
 @pytest.fixture
 def without_pictures(monkeypatch):
     """Drawing takes seconds; where pictures do not matter there are none."""
-    monkeypatch.setattr("shaper.workflow.report._pictures", lambda waveform, comparison: [])
+    monkeypatch.setattr("shaper.workflow.report.pictures", lambda found, job: [])
 
 
 def test_text_of_the_job_is_shown_as_text(page, without_pictures):
@@ -238,6 +239,11 @@ def test_the_command_prints_or_fails_clearly(tmp_path, capsys, without_pictures)
     save_waveform(tmp_path / "a.h5", make_case())
     assert main(["report", str(tmp_path / "a.h5"), "--output", "-"]) == 0
     assert capsys.readouterr().out.startswith("<!doctype html>")
+    assert main(["report", str(tmp_path / "a.h5"), "--json"]) == 0
+    data = json.loads(capsys.readouterr().out)
+    assert set(data) == {"comparison", "check", "figures", "live"}
+    assert set(data["figures"]) == {"waveform", "cuts", "map", "spectrum", "discs", "history"}
+    assert data["figures"]["history"]["infidelity"][1][3] is None  # a start that had ended
     assert main(["report", str(tmp_path / "none.h5")]) in (1, 2)
     assert "none.h5" in capsys.readouterr().err
     assert [p.name for p in tmp_path.iterdir()] == ["a.h5"]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import argparse
+import json
 import sys
 
 _EXAMPLE = """example:
@@ -32,6 +33,9 @@ def add(commands):
         default=[],
         help="composite pulses of the library to set beside them: names, or all",
     )
+    command.add_argument(
+        "--json", action="store_true", help="print the tables behind the page instead"
+    )
     return command
 
 
@@ -41,10 +45,14 @@ def run(args) -> int:
 
     from shaper.store import load_waveform
     from shaper.store.atomic import replace_file
-    from shaper.workflow.report import make_report
+    from shaper.workflow.report import make_report, report_json
 
     source = Path(args.file)
-    page = make_report(load_waveform(source), source.name, args.against)
+    waveform = load_waveform(source)
+    if args.json:
+        print(json.dumps(report_json(waveform, args.against)))
+        return 0
+    page = make_report(waveform, source.name, args.against)
     if args.output == "-":
         sys.stdout.write(page)
         return 0

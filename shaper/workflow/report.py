@@ -2,8 +2,7 @@
 
 from __future__ import annotations
 
-import re
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 
 import numpy as np
 
@@ -11,20 +10,13 @@ from shaper import figures
 from shaper.drive.dac import largest_code
 from shaper.evidence import tables
 from shaper.evidence.verdict import sentence
-from shaper.pulse import Pulse, Table, Waveform
-from shaper.report import Picture, Report, report_page
+from shaper.pulse import Pulse, Waveform
+from shaper.report import Report, report_page
 from shaper.units import DEG, MHZ
 from shaper.workflow.check import check_job
-from shaper.workflow.compare import Comparison, as_json, compare, cuts, maps
+from shaper.workflow.compare import Comparison, as_json, compare
+from shaper.workflow.pictures import START_STATES, figure_tables, pictures
 
-STARTS = {
-    "|+⟩": (1.0, 0.0, 0.0),
-    "|0⟩": (0.0, 0.0, 1.0),
-    "|1⟩": (0.0, 0.0, -1.0),
-    "|+i⟩": (0.0, 1.0, 0.0),
-}
-_SPECTRUM_POINTS = 1201
-_SPECTRUM_REACH = 12  # Rabi frequencies to either side
 _SLIDER_REACH = 5  # tolerances
 _SLIDER_DEFAULT = 0.1  # of the drive, where there is no tolerance
 _CAUTIONS = (
@@ -56,7 +48,7 @@ def make_report(waveform: Waveform, name: str = "", against: Sequence[str] = ())
             verdict=sentence(comparison.verdict, job),
             rows=numbers["pulses"],
             facts=_facts(comparison, facts),
-            pictures=_pictures(waveform, comparison),
+            pictures=pictures(figure_tables(waveform, comparison), job),
             live=live_data(comparison),
             cautions=[*_CAUTIONS, *facts["warnings"]],
             job_text=waveform.job_text,
@@ -69,6 +61,17 @@ def make_report(waveform: Waveform, name: str = "", against: Sequence[str] = ())
             },
         )
     )
+
+
+def report_json(waveform: Waveform, against: Sequence[str] = ()) -> dict:
+    """Everything the report shows, as plain data: comparison, figures' tables, live panel."""
+    comparison = compare(waveform, against)
+    return {
+        "comparison": as_json(comparison),
+        "check": check_job(comparison.job),
+        "figures": tables.plain(figure_tables(waveform, comparison)),
+        "live": live_data(comparison),
+    }
 
 
 def _facts(comparison: Comparison, facts: dict) -> dict[str, str]:
@@ -143,7 +146,7 @@ def live_data(comparison: Comparison) -> dict:
                 if degrees is not None and has_sandwich
                 else None
             ),
-            "starts": [{"label": k, "bloch": v} for k, v in STARTS.items()],
+            "starts": [{"label": k, "bloch": v} for k, v in START_STATES.items()],
             "pulses": [_played(name, pulse) for name, pulse in comparison.pulses.items()],
         }
     )
@@ -163,138 +166,3 @@ def _slider(reach: float) -> dict:
 def _theta_step(degrees: float) -> float:
     """One degree, unless the job's own angle would then fall between two steps."""
     return 1.0 if float(degrees).is_integer() else 0.1 if (10 * degrees).is_integer() else 0.01
-
-
-# --- pictures ---------------------------------------------------------------------------------
-
-
-def _pictures(waveform: Waveform, comparison: Comparison) -> list[Picture]:
-    job, pulses = comparison.job, comparison.pulses
-    names = list(pulses)
-    both = {name: pulses[name] for name in [names[0], *(n for n in names[1:] if n == "sandwich")]}
-    box = {
-        "amplitude_tolerance": job.amplitude_tolerance,
-        "detuning_tolerance_MHz": job.detuning_tolerance / MHZ,
-    }
-    waveforms = {name: tables.waveform_table(pulse) for name, pulse in both.items()}
-    plane = maps(comparison)
-    shown = list(plane["infidelity"])  # of many pulses the ones worth a picture
-    lines = cuts(comparison)
-    lines["pulses"] = {name: lines["pulses"][name] for name in shown}
-    frequency = np.linspace(-1, 1, _SPECTRUM_POINTS) * _SPECTRUM_REACH * job.rabi_max
-    spectrum = tables.spectrum_table(both, frequency)
-    marks = {}
-    if job.anharmonicity and abs(job.anharmonicity) < frequency[-1]:
-        marks["second transition"] = job.anharmonicity / MHZ
-    paths = tables.path_table(both, {k: STARTS[k] for k in ("|0⟩", "|+⟩")}, 0.0, job.detuning)
-    listed = ", ".join(shown)
-    pictures = [
-        _drawn(
-            "Waveform",
-            "I, Q, amplitude and phase, step by step as the DAC holds them; dotted: the bound.",
-            f"Drive against time of {' and '.join(both)}, within the bound throughout.",
-            lambda theme: figures.waveform_figure(
-                waveforms, rabi_max_MHz=job.rabi_max / MHZ, bound=job.bound, theme=theme
-            ),
-        ),
-        _drawn(
-            "Along each error",
-            "Infidelity when only one error is on; shaded: the tolerance of the job.",
-            f"Infidelity against detuning and against amplitude error of {listed}; "
-            "the figures at the edge of the tolerance are in the table above as the worst case.",
-            lambda theme: figures.cuts_figure(lines, **box, theme=theme),
-        ),
-        _drawn(
-            "Over both errors",
-            "Dark is good. Lines at 1e-3 (solid), 1e-4 (dashed), 1e-5 (dotted).",
-            f"Maps of the infidelity over amplitude error and detuning of {listed}.",
-            lambda theme: figures.map_figure(plane, **box, theme=theme),
-        ),
-        _drawn(
-            "Spectrum",
-            "Energy of the steps against frequency, relative to the largest value shown.",
-            f"Energy density of {' and '.join(both)} around the carrier.",
-            lambda theme: figures.spectrum_figure(spectrum, marks_MHz=marks, theme=theme),
-        ),
-    ]
-    history = _history(waveform)
-    if history is not None:
-        pictures.append(
-            _drawn(
-                "Search",
-                "Best infidelity of every start against iteration.",
-                f"The search ended with status {waveform.status}.",
-                lambda theme: figures.history_figure(
-                    history, stop_infidelity=job.stop_infidelity, theme=theme
-                ),
-            )
-        )
-    budget = budget_table(waveform)
-    if budget is not None:
-        pictures.append(
-            _drawn(
-                "Error budget",
-                "Infidelity by each effect alone, and by all at once at the worst point of the "
-                "tolerance box.",
-                f"Error budget of {' and '.join(budget['pulses'])}, recomputed independently.",
-                lambda theme: figures.budget_figure(budget, theme=theme),
-            )
-        )
-    pictures.append(
-        _drawn(
-            "Way of the Bloch vector",
-            "Lambert's equal-area discs, one a hemisphere, without errors.",
-            f"Bloch vectors from |0⟩ and |+⟩ during {' and '.join(both)}.",
-            lambda theme: figures.disc_figure(paths, theme=theme),
-            paper_only=True,
-        )
-    )
-    return pictures
-
-
-def _drawn(
-    heading: str,
-    caption: str,
-    alternative: str,
-    draw: Callable[[figures.Theme], object],
-    paper_only: bool = False,
-) -> Picture:
-    light, dark = (
-        figures.encoded(draw(theme), ".svg", theme) for theme in (figures.LIGHT, figures.DARK)
-    )
-    return Picture(heading, caption, alternative, light, dark, paper_only)
-
-
-def budget_table(waveform: Waveform) -> dict | None:
-    """The budget that ``verify`` stored, as ``figures.budget_figure`` takes it; None: not there.
-
-    Rows and columns are named in the table's own description.
-    """
-    table, together = (waveform.evidence.get(k) for k in ("budget", "budget_together"))
-    named = table and re.search(r"pulses: (.*); sources: (.*)$", table.long_name)
-    if not named or together is None:
-        return None
-    pulses, sources = (part.split(", ") for part in named.groups())
-    values = np.asarray(table.values, dtype=float)
-    if values.shape != (len(pulses), len(sources)):
-        return None
-    asked = [k for k in range(len(sources)) if not np.all(np.isnan(values[:, k]))]
-    return {
-        "source": [*(sources[k] for k in asked), "all together"],
-        "pulses": {
-            name: [*row[asked], whole]
-            for name, row, whole in zip(pulses, values, together.values, strict=True)
-        },
-    }
-
-
-def _history(waveform: Waveform) -> dict | None:
-    """The table of infidelity by start and iteration, if the file holds one with any number."""
-    for name, table in waveform.history.items():
-        if _is_history(name, table) and np.any(np.asarray(table.values) > 0):
-            return {"infidelity": np.asarray(table.values, dtype=float)}
-    return None
-
-
-def _is_history(name: str, table: Table) -> bool:
-    return tuple(table.axes) == ("start", "iteration") and ("infidelity" in name or name == "cost")

@@ -17,7 +17,8 @@ from shaper.rotation import about_z, bloch_matrix
 from shaper.store import load_waveform, save_waveform
 from shaper.target import Target, infidelity
 from shaper.units import DEG, MHZ
-from shaper.workflow.report import STARTS, make_report
+from shaper.workflow.pictures import START_STATES
+from shaper.workflow.report import make_report
 
 pytestmark = pytest.mark.skipif(
     CHROMIUM is None or DRIVER is None, reason="no chromium and chromedriver on this machine"
@@ -104,7 +105,7 @@ def test_the_end_of_the_way_is_the_rotated_start(chromium, case):
     eps = float(chromium.run("return document.getElementById('amplitude').value")) / 100
     assert eps > 0
     q = propagate(*waveform.pulses["shaped"].played, eps, parse_job(waveform.job_text).detuning)
-    for index, start in enumerate(STARTS.values()):
+    for index, start in enumerate(START_STATES.values()):
         choose(chromium, "start", index)
         shown = chromium.text("#first-end").strip("()").replace("−", "-")
         np.testing.assert_allclose(
@@ -121,7 +122,7 @@ def test_the_drawn_way_is_the_projected_path(chromium, case):
     chromium.open(page)
     detuning = parse_job(waveform.job_text).detuning
     pulse = {"shaped": waveform.pulses["shaped"]}
-    for index, (label, start) in enumerate(STARTS.items()):
+    for index, (label, start) in enumerate(START_STATES.items()):
         choose(chromium, "start", index)
         path = path_table(pulse, {label: start}, 0.0, detuning)["shaped"][label]["bloch"]
         for half, sign in (("north", 1), ("south", -1)):
