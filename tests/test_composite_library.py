@@ -13,7 +13,7 @@ from mpmath import mp
 
 from shaper import rotation
 from shaper.composite import length, place, time_optimal
-from shaper.composite.compose import compositions, two_pulse
+from shaper.composite.compose import compositions, library_pulses, two_pulse
 from shaper.composite.library import LIBRARY
 from shaper.composite.sequence import arc_rates, played_ideally
 from shaper.evidence.order import error_series, leading
@@ -310,3 +310,28 @@ def test_every_composition_on_the_grid_is_still_its_target():
 
 def test_a_target_that_needs_no_pulse_has_no_compositions():
     assert compositions(job("z", 90.0, more='equivalence = "up_to_final_z"')) == {}
+
+
+@settings(deadline=None, max_examples=25)
+@given(
+    q=unit_quaternions,
+    bound=st.sampled_from(["circle", "box"]),
+    bits=st.integers(8, 16),
+    rate=st.floats(60.0, 3000.0),
+)
+def test_no_composite_ever_exceeds_the_bound(q, bound, bits, rate):
+    """Floats and codes, on coarse and fine sample grids, smooth pulses included."""
+    text = unitary_job(q, bound).text.replace("dac_bits = 16", f"dac_bits = {bits}")
+    text = text.replace("sample_rate_MSps = 1000.0", f"sample_rate_MSps = {rate!r}")
+    text = text.replace("slice_ns = 1.0", f"slice_ns = {1e3 / rate!r}")
+    text = text.replace("duration_ns = 60.0", f"duration_ns = {6e4 / rate!r}")
+    here = parse_job(text.replace("[drive]", "[qubit]\nanharmonicity_MHz = -210.0\n[drive]"))
+    top = 2 ** (bits - 1) - 1
+    for name, found in library_pulses(here).items():
+        drive, codes = found.pulse.drive / here.rabi_max, found.pulse.codes.astype(int)
+        if bound == "circle":
+            assert np.max(np.hypot(*drive.T)) <= 1 + 1e-12, name
+            assert np.max(np.sum(codes**2, axis=1)) <= top**2, name
+        else:
+            assert np.max(np.abs(drive)) <= 1 + 1e-12, name
+            assert np.max(np.abs(codes)) <= top, name

@@ -90,6 +90,7 @@ def test_score_of_the_sandwich_against_textbook_matrices():
     worst = max(plain(e, d) for e in (-0.05, 0.0, 0.05) for d in (-d_max, 0.0, d_max))
     assert result.worst == pytest.approx(worst, rel=1e-12)
     assert result.nominal < TRACE_ROUND_OFF
+    assert result.dac_worst <= result.guaranteed <= 1.011 * result.dac_worst
 
 
 def test_score_of_the_codes_is_that_of_what_they_decode_to(rng):
@@ -120,6 +121,7 @@ def test_without_tolerance_all_figures_are_one_and_the_offset_counts():
     pulse = place(sandwich(here.target, "circle"), here)
     result = score(pulse, here)
     assert result.nominal == result.mean == result.worst
+    assert result.guaranteed is None
     off = job(amplitude=0.0, detuning_MHz=0.0, extra="[qubit]\ndetuning_MHz = 1.0\n")
     actual = reference.propagator(pulse.drive, pulse.segment_durations, 0.0, 2 * math.pi * 1e6)
     wanted = reference.rotation((0, 0, 1), math.pi / 2)

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from shaper.bench import score_grid
+from shaper.evidence.proof import prove_pulse
 from shaper.job import Job
 from shaper.physics.propagate import propagate
 from shaper.pulse import Pulse, Score
@@ -16,7 +17,8 @@ def score(pulse: Pulse, job: Job) -> Score:
 
     The box is sampled on ``bench.score_grid``, corners and edges included; the mean is exact for
     polynomials of the errors up to degree 79. Scored twice: the float waveform, and what the
-    integer codes make of it. Without a tolerance all three figures are one.
+    integer codes make of it. Without a tolerance all three figures are one; with one, the codes'
+    worst case is also bounded for every point of the box (``evidence.proof``).
 
     Args:
         pulse: shaped or composite, on the sample grid.
@@ -24,7 +26,8 @@ def score(pulse: Pulse, job: Job) -> Score:
     """
     floats = box_infidelity(pulse.drive, pulse.segment_durations, job)
     codes = box_infidelity(*pulse.played, job)
-    return Score(*floats, *codes)
+    guaranteed = prove_pulse(pulse, job).guaranteed if job.has_tolerance else None
+    return Score(*floats, *codes, guaranteed)
 
 
 def box_infidelity(

@@ -9,7 +9,6 @@ from scipy.optimize import brentq
 
 from shaper.job import Job
 from shaper.physics.propagate import propagate
-from shaper.target import infidelity
 
 LARGEST_AMPLITUDE = 0.9  # relative; beyond, a pulse is no pulse
 LARGEST_DETUNING = 2.0  # of W_max
@@ -42,12 +41,14 @@ def tolerance_window(
         end = LARGEST_DETUNING * job.rabi_max
         turns = end * float(np.sum(durations)) / (2 * np.pi)
 
+    rows = job.target.error_rows
+
     def excess(size: np.ndarray) -> np.ndarray:
         """[2, point]: above the threshold, to either side."""
         both = np.stack([size, -size])
         eps, delta = (both, 0.0) if error == "amplitude" else (0.0, both)
         q = propagate(drive, durations, eps, job.detuning + delta)
-        return infidelity(q, job.target) - threshold
+        return job.target.scale * np.sum((q @ rows.T) ** 2, axis=-1) - threshold
 
     points = max(_FEWEST_POINTS, int(_POINTS_PER_TURN * turns) + 1)
     sizes = np.linspace(0.0, end, points)
