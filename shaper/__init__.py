@@ -6,7 +6,11 @@ __version__ = "0.1.0"
 
 # public name -> the room it lives in; imported on first use, so that ``import shaper`` is light
 _PUBLIC = {
+    "compare": "shaper.workflow.compare",
     "load_waveform": "shaper.store",
+    "optimize": "shaper.workflow.optimize",
+    "parse_job": "shaper.job",
+    "read_job": "shaper.job",
     "save_waveform": "shaper.store",
 }
 

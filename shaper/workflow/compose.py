@@ -2,17 +2,13 @@
 
 from __future__ import annotations
 
-import datetime
-import platform
 from collections.abc import Sequence
-from importlib.metadata import version
 
-from shaper import __version__
 from shaper.composite.compose import Loadable, library_pulses
 from shaper.errors import InputError
-from shaper.evidence.score import score
 from shaper.job import Job
 from shaper.pulse import Waveform
+from shaper.workflow.assemble import assemble
 
 _LIBRARIES = ("numpy", "scipy", "h5py")
 
@@ -33,22 +29,4 @@ def compose(job: Job, names: Sequence[str] = ("all",)) -> Waveform:
             "shift the phase of all later pulses instead"
         )
     pulses = {name: loadable.pulse for name, loadable in found.items()}
-    return Waveform(
-        title=job.title,
-        job_text=job.text,
-        created=datetime.datetime.now(datetime.UTC).isoformat(timespec="seconds"),
-        software=_software(),
-        seed=job.seed,
-        status="composite",
-        target=job.target.quaternion,
-        error_rows=job.target.error_rows,
-        error_scale=job.target.scale,
-        pulses=pulses,
-        scores={name: score(pulse, job) for name, pulse in pulses.items()},
-    )
-
-
-def _software() -> str:
-    """Versions of everything that the numbers came through."""
-    libraries = ", ".join(f"{name} {version(name)}" for name in _LIBRARIES)
-    return f"shaper {__version__}, Python {platform.python_version()}, {libraries}"
+    return assemble(job, pulses, "composite", _LIBRARIES)

@@ -1,0 +1,54 @@
+"""From pulses to the record that a waveform file holds: scores, provenance, target."""
+
+from __future__ import annotations
+
+import datetime
+import platform
+from dataclasses import replace
+from importlib.metadata import version
+
+from shaper import __version__
+from shaper.evidence.proof import prove_pulse
+from shaper.evidence.score import score
+from shaper.job import Job
+from shaper.pulse import Pulse, Score, Waveform
+
+
+def assemble(
+    job: Job, pulses: dict[str, Pulse], status: str, libraries: tuple[str, ...], **more
+) -> Waveform:
+    """The waveform record of some pulses of one job, each scored on the one grid.
+
+    Args:
+        status: of the search, see ``Waveform``.
+        libraries: names of the packages that the numbers came through.
+        more: further fields of ``Waveform``.
+    """
+    return Waveform(
+        title=job.title,
+        job_text=job.text,
+        created=datetime.datetime.now(datetime.UTC).isoformat(timespec="seconds"),
+        software=_software(libraries),
+        seed=job.seed,
+        status=status,
+        target=job.target.quaternion,
+        error_rows=job.target.error_rows,
+        error_scale=job.target.scale,
+        pulses=pulses,
+        scores={name: _proven_score(pulse, job) for name, pulse in pulses.items()},
+        **more,
+    )
+
+
+def _proven_score(pulse: Pulse, job: Job) -> Score:
+    """The score, with the guaranteed bound over the whole box where there is a box."""
+    found = score(pulse, job)
+    if not job.has_tolerance:
+        return found
+    return replace(found, guaranteed=prove_pulse(pulse, job).guaranteed)
+
+
+def _software(libraries: tuple[str, ...]) -> str:
+    """Versions of everything that the numbers came through."""
+    named = ", ".join(f"{name} {version(name)}" for name in libraries)
+    return f"shaper {__version__}, Python {platform.python_version()}, {named}"
