@@ -163,7 +163,8 @@ class MutatedLink(Reader):
         self.generator, self.rng, self.at = generator, rng, at
         self.count, self.inbox, self.largest = 0, b"", 0
 
-    def send(self, message, seconds):
+    def send(self, seconds, *pieces):
+        message = b"".join(pieces)
         with self._exchange():
             plain, blocks = message.removesuffix(b"\n").decode("latin-1"), []
             if ",#" in plain:

@@ -86,7 +86,7 @@ def test_silence_ends_and_breaks_the_link():
         with pytest.raises(LinkError, match="out of time"):
             link.read_line(SOON)
         assert not link.usable
-        for use in (lambda: link.send(b"x\n", SOON), lambda: link.read_line(SOON), link.idle):
+        for use in (lambda: link.send(SOON, b"x\n"), lambda: link.read_line(SOON), link.idle):
             with pytest.raises(LinkError, match="link is broken"):
                 use()
         link.close()
@@ -113,7 +113,7 @@ def test_a_peer_that_takes_nothing():
     with peer(lambda link: stop.wait()) as address:
         link = SocketLink(address, LONG)
         with pytest.raises(LinkError, match="out of time sending"):
-            link.send(bytes(50_000_000), SOON)
+            link.send(SOON, bytes(50_000_000))
         assert not link.usable
         link.close()
         stop.set()

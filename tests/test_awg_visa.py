@@ -95,9 +95,9 @@ def test_a_peer_that_takes_nothing_is_given_up():
     fault = stand_in.Fault("stall")
     with stand_in.running(stand_in.Generator(faults=[fault])) as (_, address):
         link = open_link(resource(address), LONG)
-        link.send(b"*CLS\n", LONG)
+        link.send(LONG, b"*CLS\n")
         with pytest.raises(LinkError, match="out of time sending"):
-            link.send(bytes(50_000_000), SOON)
+            link.send(SOON, bytes(50_000_000))
         assert not link.usable
         link.close()
 

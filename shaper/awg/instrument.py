@@ -65,7 +65,7 @@ class Instrument:
         reply = None
         try:
             self.link.idle()  # an answer that nobody asked for must not be taken for this one
-            self.link.send(text.encode("ascii") + b"\n", self.timeout)
+            self.link.send(self.timeout, text.encode("ascii") + b"\n")
             reply = answer()
             return reply
         finally:  # also when it failed: the record shows how far it came
@@ -201,12 +201,11 @@ class Instrument:
         head = self.says.data.format(name=name)
         tail = ";" + self.says.complete
         prefix = block.header(len(data))
-        message = b"".join((head.encode("ascii"), prefix, data, tail.encode("ascii"), b"\n"))
         begin, answer = time.monotonic(), None
         try:
             self.link.idle()
-            seconds = self.profile.link.transfer_seconds(len(message))
-            self.link.send(message, seconds)
+            seconds = self.profile.link.transfer_seconds(len(data))
+            self.link.send(seconds, head.encode() + prefix, data, tail.encode() + b"\n")
             answer = self.link.read_line(seconds)
         finally:
             self.note(
@@ -224,7 +223,7 @@ class Instrument:
         begin, data = time.monotonic(), None
         try:
             self.link.idle()
-            self.link.send(text.encode("ascii") + b"\n", self.timeout)
+            self.link.send(self.timeout, text.encode("ascii") + b"\n")
             data = self.link.read_block(self.profile.link.transfer_seconds(expected), limit)
         finally:
             self.note(

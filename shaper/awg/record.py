@@ -1,7 +1,7 @@
 """The load record: what was sent, what came back, when, and how it ended. Readable at any moment.
 
-One JSON document, replaced as a whole. Every change of state is written at once, before the deed
-that it announces; plain lines at the latest with the first line after ``_PATIENCE``.
+One JSON document, replaced as a whole. That a trace is about to be sent is written before it is;
+all else at the latest with the first line after ``_PATIENCE``, and at the end.
 """
 
 from __future__ import annotations
@@ -53,16 +53,19 @@ class LoadRecord:
             self.save()
 
     def put(self, **items) -> None:
-        """Change entries at the top level."""
+        """Change entries at the top level; written with the next line that is."""
         self.document.update(items)
-        self.save()
 
     def trace(self, name: str, state: str) -> None:
-        """Change the state of one trace."""
+        """Change the state of one trace; on disk before this returns if it is to be sent.
+
+        A killed loader must leave the names that it may have touched, no more.
+        """
         for entry in self.document["traces"]:
             if entry["name"] == name:
                 entry["state"] = state
-        self.save()
+        if state == "sending":
+            self.save()
 
     def states(self, *states: str) -> list[str]:
         """Names of the traces in one of these states."""

@@ -37,8 +37,9 @@ class RehearsalLink:
         self._answer = ""
         self._block = b""
 
-    def send(self, message: bytes, seconds: float) -> None:
+    def send(self, seconds: float, *pieces: bytes) -> None:
         """See ``Link``."""
+        message = b"".join(pieces)
         says, plain = self.profile.commands, message.removesuffix(b"\n")
         head, mark, rest = plain.partition(b"#")
         shown = plain.decode("latin-1")

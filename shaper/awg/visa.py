@@ -56,8 +56,9 @@ class VisaLink(Reader):
         self._resource.read_termination = None
         self._resource.chunk_size = _CHUNK
 
-    def send(self, message: bytes, seconds: float) -> None:
+    def send(self, seconds: float, *pieces: bytes) -> None:
         """See ``Link``."""
+        message = b"".join(pieces)
 
         def write():
             sent = 0
