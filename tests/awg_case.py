@@ -110,10 +110,7 @@ def run_load(made, address, path, say=lambda text: None, **options):
     """Load over a socket; the record."""
     record = begin_record(made, path, address)
     connect = lambda: open_link(address, made.profile.link.timeout_s)  # noqa: E731
-    try:
-        load(made, connect, record, say=say, **options)
-    finally:
-        run_load.record = record.document
+    load(made, connect, record, say=say, **options)
     return record.document
 
 

@@ -3,6 +3,8 @@
 The rules that every ending must obey stand in ``assert_honest``.
 """
 
+from concurrent.futures import ThreadPoolExecutor
+
 import numpy as np
 import pytest
 import stand_in
@@ -128,30 +130,31 @@ def test_each_fault(rng, tmp_path, kind, at, lasting, code):
     assert record["output"]["confirmed_off"] == reachable, lines
 
 
-@pytest.mark.parametrize("chunk", range(10))
-def test_random_schedules(tmp_path, chunk):
-    for seed in range(chunk, SCHEDULES, 10):
-        rng = np.random.default_rng(seed)
-        kinds = rng.choice(sorted(stand_in.FAULTS), size=rng.integers(1, 4))
-        faults = [
-            stand_in.Fault(
-                str(kind), int(rng.integers(0, 42)), bool(rng.random() < 0.2), seconds=0.2
-            )
-            for kind in kinds
-        ]
-        silent = bool(SILENT & set(kinds))
-        into = profile(
-            **(SHORTER if silent else {}), data={"byte_order": str(rng.choice(["big", "little"]))}
-        )
-        made = plan(rng, into=into)
-        on = {1: bool(rng.random() < 0.5), 2: bool(rng.random() < 0.5)}
-        generator = stand_in.Generator(on=on, faults=list(faults))
-        code, record, _ = attempt(made, generator, tmp_path / f"{seed}.load.json")
-        struck = {fault.kind for fault in faults if fault.struck}
-        allowed = set().union({0} if not struck else set(), *(CODES[kind] for kind in struck))
-        if silent and "out of time" in (record["error"] or ""):
-            allowed.add(1)  # a busy machine can be too slow for the short deadline
-        assert code in allowed, (seed, faults, code, record["error"])
+def test_random_schedules(tmp_path):
+    """Several at a time, since most of them wait for a deadline."""
+    with ThreadPoolExecutor(6) as pool:
+        for _ in pool.map(lambda seed: one_schedule(seed, tmp_path), range(SCHEDULES)):
+            pass
+
+
+def one_schedule(seed, folder):
+    rng = np.random.default_rng(seed)
+    kinds = [str(kind) for kind in rng.choice(sorted(stand_in.FAULTS), size=rng.integers(1, 4))]
+    faults = [
+        stand_in.Fault(kind, int(rng.integers(0, 42)), bool(rng.random() < 0.2), seconds=0.2)
+        for kind in kinds
+    ]
+    silent = bool(SILENT & set(kinds))
+    order = {"byte_order": str(rng.choice(["big", "little"]))}
+    made = plan(rng, into=profile(**(SHORTER if silent else {}), data=order))
+    on = {1: bool(rng.random() < 0.5), 2: bool(rng.random() < 0.5)}
+    generator = stand_in.Generator(on=on, faults=list(faults))
+    code, record, _ = attempt(made, generator, folder / f"{seed}.load.json")
+    struck = {fault.kind for fault in faults if fault.struck}
+    allowed = set().union({0} if not struck else set(), *(CODES[kind] for kind in struck))
+    if silent and "out of time" in (record["error"] or ""):
+        allowed.add(1)  # a busy machine can be too slow for the short deadline
+    assert code in allowed, (seed, faults, code, record["error"])
 
 
 class MutatedLink(Reader):

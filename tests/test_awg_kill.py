@@ -85,8 +85,10 @@ def test_killed_at_any_moment(bench, tmp_path):
     assert cut >= KILLS / 2, "most kills must come before the end to prove anything"
 
 
-@pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM])
-@pytest.mark.parametrize("at", [1, 16, 28])
+@pytest.mark.parametrize(
+    "number, at",
+    [(signal.SIGINT, 1), (signal.SIGINT, 16), (signal.SIGINT, 28), (signal.SIGTERM, 28)],
+)
 def test_interrupted(bench, tmp_path, number, at):
     generator = stand_in.Generator(on={1: True, 2: True})
     generator.log = Trigger(at)
