@@ -217,7 +217,7 @@ def test_the_two_discs_meet_on_the_equator(rng):
 
 
 def test_every_axis_names_its_unit(pulses):
-    unitless = {"Average gate infidelity", "Iteration", ""}
+    unitless = {"Average gate infidelity", "Infidelity that was lowered", "Iteration", ""}
     for name, figure in all_figures(pulses).items():
         labels = {ax.get_xlabel() for ax in figure.axes} | {ax.get_ylabel() for ax in figure.axes}
         for part in (figure, *figure.subfigs):
@@ -249,6 +249,18 @@ def test_the_drawn_phase_is_the_table_without_false_jumps(pulses):
     risers = np.abs(np.diff(phase))
     assert np.nanmax(risers) <= 180
     assert np.isnan(phase).sum() == np.sum(np.abs(np.diff(table["phase_deg"])) > 180)
+
+
+def test_history_marks_stages_and_the_start_that_won():
+    values = np.array([[0.5, 1e-5, np.nan, np.nan], [0.6, 1e-4, 2e-3, 1e-3]])
+    figure = figures.history_figure({"infidelity": values, "stage": [0, 0, 1, 1]})
+    (ax,) = figure.axes
+    (legend,) = figure.legends
+    assert [t.get_text() for t in legend.get_texts()][0] == "best start (2 of 2)"
+    bold = max(ax.lines, key=lambda line: line.get_linewidth())
+    np.testing.assert_array_equal(bold.get_xdata(), [0, 1, np.nan, 2, 3])
+    np.testing.assert_array_equal(bold.get_ydata(), [0.6, 1e-4, np.nan, 2e-3, 1e-3])
+    assert 1.5 in [line.get_xdata()[0] for line in ax.lines]
 
 
 def test_slow_drive_is_labeled_in_kilohertz_and_milliseconds():

@@ -58,7 +58,9 @@ def history_table(waveform: Waveform) -> dict | None:
     """Infidelity by start and iteration, if the file holds such a table with any number."""
     for name, table in waveform.history.items():
         if _is_history(name, table) and np.any(np.asarray(table.values) > 0):
-            return {"infidelity": np.asarray(table.values, dtype=float)}
+            found = {"infidelity": np.asarray(table.values, dtype=float)}
+            stage = waveform.history.get("stage")
+            return found if stage is None else found | {"stage": np.asarray(stage.values)}
     return None
 
 
@@ -137,7 +139,8 @@ def pictures(found: dict, job: Job) -> list[Picture]:
         drawn.append(
             _drawn(
                 "Search",
-                "Best infidelity of every start against iteration.",
+                "What every start had reached. A later stage measures harder, nearer to the worst case, so "
+                "its lines may lie higher.",
                 "How the infidelity of each start fell during the search.",
                 lambda theme: figures.history_figure(
                     found["history"], stop_infidelity=job.stop_infidelity, theme=theme
