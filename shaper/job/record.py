@@ -5,7 +5,7 @@ from __future__ import annotations
 import difflib
 import os
 import tomllib
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -13,12 +13,73 @@ from pydantic import BaseModel, ValidationError
 
 from shaper import rotation
 from shaper.errors import InputError
-from shaper.job.schema import JobFile, TargetSection
+from shaper.job.schema import GroupSection, JobFile, TargetSection
 from shaper.target import Target
 from shaper.units import DEG, MHZ, MSPS, NS, US
 
 _MAX_JOB_BYTES = 1_000_000
 _DEFAULT_STOP_NOMINAL = 1e-9
+
+
+@dataclass(frozen=True)
+class Group:
+    """One qubit that the pulse acts on: its target, and the box of errors around its resonance.
+
+    Attributes:
+        name: of the qubit.
+        target: what the pulse must do to it.
+        detuning: rad/s, its frequency minus the carrier's.
+        amplitude_tolerance: relative, +-.
+        detuning_tolerance: rad/s, +-.
+        weight: of its infidelity against the others'.
+    """
+
+    name: str
+    target: Target
+    detuning: float
+    amplitude_tolerance: float
+    detuning_tolerance: float
+    weight: float = 1.0
+
+
+@dataclass(frozen=True)
+class LineFacts:
+    """What the job knows of the drive line; ``shaper.drive.line`` makes a model of it."""
+
+    kind: str
+    bandwidth: float | None  # Hz
+    file: Path | None
+    ports: tuple[int, int]  # to, from
+
+
+@dataclass(frozen=True)
+class MixerFacts:
+    """Calibrated mixer faults: Q gain, quadrature error (rad), offsets (rad/s), skew (s)."""
+
+    gain: float
+    phase: float
+    offset_i: float
+    offset_q: float
+    skew: float
+
+
+@dataclass(frozen=True)
+class NoiseFacts:
+    """Slow noise: rms detuning (rad/s), rms relative amplitude; file of a spectrum, or None."""
+
+    detuning_sigma: float
+    amplitude_sigma: float
+    detuning_spectrum: Path | None
+
+
+@dataclass(frozen=True)
+class Shape:
+    """Wishes for the look of the waveform: weights, a band (Hz) or None, a rise time (s)."""
+
+    smoothness: float
+    max_bandwidth: float | None
+    band_weight: float
+    rise: float
 
 
 @dataclass(frozen=True)
@@ -49,6 +110,40 @@ class Job:
     seed: int
     minimize: str
     stop_infidelity: float | None
+    others: tuple[Group, ...]
+    shape: Shape
+    line: LineFacts
+    correction: str
+    carrier: float | None  # rad/s
+    intermediate_frequency: float  # rad/s
+    mixer: MixerFacts
+    noise: NoiseFacts
+    levels: int
+    polish: bool
+    find_shortest: bool  # the duration is to be found; ``slices`` is then only a first guess
+
+    @property
+    def groups(self) -> tuple[Group, ...]:
+        """All qubits that the pulse acts on, the addressed one first."""
+        addressed = Group(
+            "addressed",
+            self.target,
+            self.detuning,
+            self.amplitude_tolerance,
+            self.detuning_tolerance,
+        )
+        return (addressed, *self.others)
+
+    def for_group(self, group: Group) -> Job:
+        """The job as if this qubit were alone: for scores, proofs and figures of it."""
+        return replace(
+            self,
+            target=group.target,
+            detuning=group.detuning,
+            amplitude_tolerance=group.amplitude_tolerance,
+            detuning_tolerance=group.detuning_tolerance,
+            others=(),
+        )
 
     @property
     def slice_duration(self) -> float:
@@ -62,8 +157,8 @@ class Job:
 
     @property
     def has_tolerance(self) -> bool:
-        """Whether there is a box to withstand at all."""
-        return self.amplitude_tolerance > 0 or self.detuning_tolerance > 0
+        """Whether there is a box to withstand at all, for any of the qubits."""
+        return any(g.amplitude_tolerance > 0 or g.detuning_tolerance > 0 for g in self.groups)
 
 
 def read_job(path: str | os.PathLike) -> Job:
@@ -84,15 +179,16 @@ def read_job(path: str | os.PathLike) -> Job:
         text = raw.decode("utf-8")
     except UnicodeDecodeError as error:
         raise InputError(f"{path}: expected UTF-8 text: {error.reason}") from error
-    return parse_job(text, str(path))
+    return parse_job(text, str(path), path.parent)
 
 
-def parse_job(text: str, name: str = "job") -> Job:
+def parse_job(text: str, name: str = "job", folder: str | os.PathLike = ".") -> Job:
     """Check the text of a job file and turn it into SI.
 
     Args:
         text: TOML.
         name: where it came from, for the messages.
+        folder: where the files it names lie.
     Raises:
         InputError: one line per fault.
     """
@@ -104,18 +200,47 @@ def parse_job(text: str, name: str = "job") -> Job:
         file = JobFile.model_validate(data)
     except ValidationError as error:
         raise InputError(*_fault_lines(error, name)) from error
+    target, target_name = _named_target(file.target, f"{name}: target")
+    others = tuple(
+        _group(section, file.qubit.detuning_MHz, f"{name}: group.{k}")
+        for k, section in enumerate(file.group)
+    )
+    return _in_si(file, text, target, target_name, others, Path(folder))
+
+
+def _named_target(section: TargetSection, place: str) -> tuple[Target, str]:
     try:
-        target, target_name = _target(file.target)
+        return _target(section)
     except ValueError as error:
-        raise InputError(f"{name}: target.{error}") from error
-    return _in_si(file, text, target, target_name)
+        raise InputError(f"{place}.{error}") from error
 
 
-def _in_si(file: JobFile, text: str, target: Target, target_name: str) -> Job:
+def _group(section: GroupSection, detuning_MHz: float, place: str) -> Group:
+    return Group(
+        name=section.name,
+        target=_named_target(section.target, f"{place}.target")[0],
+        detuning=(detuning_MHz + section.offset_MHz) * MHZ,
+        amplitude_tolerance=section.amplitude,
+        detuning_tolerance=section.detuning_MHz * MHZ,
+        weight=section.weight,
+    )
+
+
+def _in_si(
+    file: JobFile, text: str, target: Target, target_name: str, others: tuple, folder: Path
+) -> Job:
     qubit, drive, tolerance, search = file.qubit, file.drive, file.tolerance, file.search
     stop = search.stop_infidelity
-    if stop is None and not (tolerance.amplitude or tolerance.detuning_MHz):
+    tolerant = tolerance.amplitude or tolerance.detuning_MHz
+    tolerant = tolerant or any(g.amplitude_tolerance or g.detuning_tolerance for g in others)
+    if stop is None and not tolerant:
         stop = _DEFAULT_STOP_NOMINAL
+    shortest = file.pulse.duration_ns == "shortest"
+    line, mixer, noise, shape = file.line, file.mixer, file.noise, file.shape
+
+    def beside(name: str | None) -> Path | None:
+        return None if name is None else folder / name
+
     return Job(
         title=file.title,
         text=text,
@@ -134,13 +259,44 @@ def _in_si(file: JobFile, text: str, target: Target, target_name: str) -> Job:
         equivalence=file.target.equivalence,
         amplitude_tolerance=tolerance.amplitude,
         detuning_tolerance=tolerance.detuning_MHz * MHZ,
-        slices=round(file.pulse.duration_ns / file.pulse.slice_ns),
+        slices=1 if shortest else round(file.pulse.duration_ns / file.pulse.slice_ns),
         samples_per_slice=round(file.pulse.slice_ns * NS * drive.sample_rate_MSps * MSPS),
         starts=search.starts,
         iterations=search.iterations,
         seed=search.seed,
         minimize=search.minimize,
         stop_infidelity=stop,
+        others=others,
+        shape=Shape(
+            shape.smoothness,
+            shape.max_bandwidth_MHz and shape.max_bandwidth_MHz * 1e6,
+            shape.band_weight,
+            shape.rise_ns * NS,
+        ),
+        line=LineFacts(
+            line.kind,
+            line.bandwidth_MHz and line.bandwidth_MHz * 1e6,
+            beside(line.file),
+            (line.to_port, line.from_port),
+        ),
+        correction=drive.correction,
+        carrier=drive.carrier_GHz and drive.carrier_GHz * 1e3 * MHZ,
+        intermediate_frequency=drive.intermediate_MHz * MHZ,
+        mixer=MixerFacts(
+            mixer.gain,
+            mixer.phase_deg * DEG,
+            mixer.offset_i_MHz * MHZ,
+            mixer.offset_q_MHz * MHZ,
+            mixer.skew_ns * NS,
+        ),
+        noise=NoiseFacts(
+            noise.detuning_sigma_kHz * 1e-3 * MHZ,
+            noise.amplitude_sigma,
+            beside(noise.detuning_psd_file),
+        ),
+        levels=qubit.levels,
+        polish=drive.polish,
+        find_shortest=shortest,
     )
 
 

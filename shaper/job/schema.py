@@ -32,6 +32,8 @@ class Qubit(Section):
         None, description="second transition minus first; leakage is modelled if given"
     )
 
+    levels: int = Field(3, ge=3, le=5, description="levels of the model if there is leakage")
+
     @model_validator(mode="after")
     def _physical(self):
         if self.t1_us and self.t2_us and self.t2_us > 2 * self.t1_us:
@@ -57,6 +59,65 @@ class Drive(Section):
     dac_bits: int = Field(14, ge=2, le=16, description="DAC resolution, sign included")
     granularity_samples: int = Field(1, ge=1, le=65536, description="length multiple of the AWG")
     min_samples: int = Field(1, ge=1, le=1_000_000, description="shortest length of the AWG")
+    carrier_GHz: Positive | None = Field(None, description="frequency of the oscillating carrier")
+    correction: Literal["model", "inverse", "none"] = Field(
+        "model",
+        description="of the line: in the model, by predistortion, or not at all",
+    )
+    intermediate_MHz: float = Field(
+        0.0, description="digital intermediate frequency, its phase counted from sample 0"
+    )
+    polish: bool = Field(False, description="a last search on the integer codes themselves")
+
+
+class LineSection(Section):
+    """The drive line between DAC and qubit."""
+
+    kind: Literal["none", "first_order", "gaussian", "step_response", "touchstone"] = Field(
+        "none", description="what is known of it"
+    )
+    bandwidth_MHz: Positive | None = Field(
+        None, description="-3 dB, to either side of the carrier; first_order and gaussian"
+    )
+    file: str | None = Field(
+        None, description="measured: CSV time_ns,response or Touchstone, relative to the job file"
+    )
+    from_port: int = Field(1, ge=1, description="Touchstone port on the side of the DAC")
+    to_port: int = Field(2, ge=1, description="Touchstone port on the side of the qubit")
+
+    @model_validator(mode="after")
+    def _one_source(self):
+        needs = {"first_order": "bandwidth_MHz", "gaussian": "bandwidth_MHz"}
+        needs |= {"step_response": "file", "touchstone": "file"}
+        needed = needs.get(self.kind)
+        for key in ("bandwidth_MHz", "file"):
+            given = getattr(self, key) is not None
+            if given != (key == needed):
+                raise ValueError(
+                    f"{key}: expected {'a value' if key == needed else 'no such key'} "
+                    f"with kind = {self.kind!r}, got {getattr(self, key)!r}"
+                )
+        return self
+
+
+class MixerSection(Section):
+    """Calibrated faults of the I/Q mixer, corrected before the codes."""
+
+    gain: Positive = Field(1.0, description="of the Q arm, relative to I")
+    phase_deg: float = Field(0.0, gt=-45, lt=45, description="quadrature error")
+    offset_i_MHz: float = Field(0.0, description="carrier leakage in I, as a Rabi frequency")
+    offset_q_MHz: float = Field(0.0, description="carrier leakage in Q, as a Rabi frequency")
+    skew_ns: float = Field(0.0, description="by which Q is late")
+
+
+class NoiseSection(Section):
+    """What drifts and fluctuates; used by verify."""
+
+    detuning_sigma_kHz: float = Field(0.0, ge=0, description="quasi-static, rms")
+    amplitude_sigma: float = Field(0.0, ge=0, description="quasi-static, relative, rms")
+    detuning_psd_file: str | None = Field(
+        None, description="CSV frequency_Hz,density_Hz2_per_Hz, relative to the job file"
+    )
 
 
 class TargetSection(Section):
@@ -113,10 +174,36 @@ class Tolerance(Section):
     detuning_MHz: float = Field(0.0, ge=0, description="drift of the resonance, +-")
 
 
+class GroupSection(Section):
+    """Another qubit on the same line, with a target of its own."""
+
+    name: str = Field(max_length=100, description="of the qubit")
+    offset_MHz: float = Field(description="of its frequency from the addressed qubit's")
+    target: TargetSection = Field(description="what the same pulse must do to it")
+    amplitude: float = Field(0.0, ge=0, lt=1, description="relative amplitude error, +-")
+    detuning_MHz: float = Field(0.0, ge=0, description="drift of its resonance, +-")
+    weight: Positive = Field(1.0, description="of its infidelity against the others'")
+
+
+class ShapeSection(Section):
+    """What the waveform should look like, apart from what it does."""
+
+    smoothness: float = Field(0.0, ge=0, description="weight of the mean squared second difference")
+    max_bandwidth_MHz: Positive | None = Field(
+        None, description="band, to either side of the carrier, that should hold the energy"
+    )
+    band_weight: Positive = Field(10.0, description="weight of the part of the energy outside")
+    rise_ns: float = Field(
+        0.0, ge=0, description="the drive rises from zero and falls back to it in this time"
+    )
+
+
 class PulseSection(Section):
     """The waveform's clockwork."""
 
-    duration_ns: Positive = Field(description="length of the waveform")
+    duration_ns: Positive | Literal["shortest"] = Field(
+        description='length of the waveform, or "shortest": what reaches stop_infidelity'
+    )
     slice_ns: Positive = Field(description="length of a slice, a whole number of DAC samples")
 
 
@@ -128,7 +215,10 @@ class Search(Section):
         100, ge=1, le=1_000_000, description="most exploring steps of each start"
     )
     seed: int = Field(0, ge=0, le=2**31 - 1, description="of the random starts")
-    minimize: Literal["worst", "mean"] = Field("worst", description="over the tolerance box")
+    minimize: Literal["worst", "mean", "first_order"] = Field(
+        "worst",
+        description="over the tolerance box; first_order: the slopes at its center instead",
+    )
     stop_infidelity: Annotated[float, Field(gt=0, lt=1)] | None = Field(
         None, description="the search stops here; falling short of it is exit code 3"
     )
@@ -140,9 +230,14 @@ class JobFile(Section):
     title: str = Field("", max_length=500, description="free text")
     qubit: Qubit = Field(default_factory=Qubit)
     drive: Drive
+    line: LineSection = Field(default_factory=LineSection)
+    mixer: MixerSection = Field(default_factory=MixerSection)
+    noise: NoiseSection = Field(default_factory=NoiseSection)
     target: TargetSection
     tolerance: Tolerance = Field(default_factory=Tolerance)
+    group: list[GroupSection] = Field(default_factory=list, max_length=20)
     pulse: PulseSection
+    shape: ShapeSection = Field(default_factory=ShapeSection)
     search: Search = Field(default_factory=Search)
 
     @model_validator(mode="after")
@@ -154,6 +249,40 @@ class JobFile(Section):
                 f"(multiple of {1e3 / self.drive.sample_rate_MSps:.10g} ns), "
                 f"got {self.pulse.slice_ns:.10g} ns = {samples:.10g} samples"
             )
+        if self.pulse.duration_ns == "shortest":
+            self._require_goal()
+        else:
+            self._require_whole_slices()
+        if 2 * self.shape.rise_ns > 0 and self.pulse.duration_ns != "shortest":
+            if 2 * self.shape.rise_ns >= self.pulse.duration_ns:
+                raise ValueError(
+                    "shape.rise_ns: expected less than half of pulse.duration_ns = "
+                    f"{self.pulse.duration_ns:g}, got {self.shape.rise_ns:g}"
+                )
+        if self.line.kind == "touchstone" and self.drive.carrier_GHz is None:
+            raise ValueError("drive.carrier_GHz: expected a value with a touchstone line, got none")
+        if abs(self.drive.intermediate_MHz) >= self.drive.sample_rate_MSps / 2:
+            raise ValueError(
+                "drive.intermediate_MHz: expected less than half of sample_rate_MSps, got "
+                f"{self.drive.intermediate_MHz:g}"
+            )
+        if self.search.minimize == "first_order" and not (
+            self.tolerance.amplitude or self.tolerance.detuning_MHz
+        ):
+            raise ValueError(
+                'search.minimize: expected a tolerance with "first_order": '
+                "which errors, and how they weigh, is read from it"
+            )
+        return self
+
+    def _require_goal(self):
+        tolerant = self.tolerance.amplitude or self.tolerance.detuning_MHz
+        if tolerant and self.search.stop_infidelity is None:
+            raise ValueError(
+                'pulse.duration_ns: expected search.stop_infidelity with "shortest", got none'
+            )
+
+    def _require_whole_slices(self):
         slices = self.pulse.duration_ns / self.pulse.slice_ns
         if round(slices) < 1 or abs(slices - round(slices)) > 1e-9 * max(slices, 1.0):
             raise ValueError(
@@ -165,4 +294,3 @@ class JobFile(Section):
             raise ValueError(
                 f"pulse.duration_ns: expected at most {MAX_SLICES} slices, got {round(slices)}"
             )
-        return self

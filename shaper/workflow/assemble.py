@@ -4,14 +4,12 @@ from __future__ import annotations
 
 import datetime
 import platform
-from dataclasses import replace
 from importlib.metadata import version
 
 from shaper import __version__
-from shaper.evidence.proof import prove_pulse
 from shaper.evidence.score import score
 from shaper.job import Job
-from shaper.pulse import Pulse, Score, Waveform
+from shaper.pulse import Pulse, Waveform
 
 
 def assemble(
@@ -35,17 +33,9 @@ def assemble(
         error_rows=job.target.error_rows,
         error_scale=job.target.scale,
         pulses=pulses,
-        scores={name: _proven_score(pulse, job) for name, pulse in pulses.items()},
+        scores={name: score(pulse, job) for name, pulse in pulses.items()},
         **more,
     )
-
-
-def _proven_score(pulse: Pulse, job: Job) -> Score:
-    """The score, with the guaranteed bound over the whole box where there is a box."""
-    found = score(pulse, job)
-    if not job.has_tolerance:
-        return found
-    return replace(found, guaranteed=prove_pulse(pulse, job).guaranteed)
 
 
 def _software(libraries: tuple[str, ...]) -> str:
