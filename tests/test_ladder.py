@@ -7,6 +7,7 @@ import pytest
 from scipy.linalg import expm
 
 from shaper import rotation
+from shaper.drive.line import filtered, first_order, taps
 from shaper.errors import InputError
 from shaper.physics import leakage, two_level
 from shaper.physics.ladder import Ladder, derivative_corrected, plan, propagate_qubit
@@ -241,6 +242,27 @@ def test_search_reaches_round_off_where_the_gaussian_cannot():
     gaussian = derivative_corrected(np.pi, 0.0, 10 * NS, 20, TRANSMON, 0.5)
     u = textbook(TRANSMON, gaussian, 0.5 * NS)
     assert pedersen(u[:2, :2], rotation.matrix(HALF_TURN.quaternion)) > 1e-4
+
+
+def test_search_through_a_line():
+    """On three levels and behind a 150 MHz line at once; checked by matrix exponentials."""
+    line = first_order(150e6)
+    kernel = taps(line, 0.5 * NS, 2).kernel
+    found = search_ladder(
+        TRANSMON,
+        HALF_TURN,
+        24,
+        0.5 * NS,
+        60 * MHZ,
+        starts=4,
+        iterations=60,
+        stop=1e-16,
+        kernel=kernel,
+    )
+    u = textbook(TRANSMON, filtered(kernel, found.drive), 0.25 * NS)
+    assert pedersen(u[:2, :2], rotation.matrix(HALF_TURN.quaternion)) < 1e-10
+    u = textbook(TRANSMON, found.drive, 0.5 * NS)
+    assert pedersen(u[:2, :2], rotation.matrix(HALF_TURN.quaternion)) > 1e-5
 
 
 def test_bad_ladders_give_one_line():

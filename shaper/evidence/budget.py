@@ -65,6 +65,8 @@ class Effects:
         cells: per sample, of the model's grid.
         anharmonicity: rad/s.
         levels: of the ladder.
+        on_ladder: whether the search saw the ladder; then the file claims what three levels make
+            of the pulse, and the leakage entry is the population outside alone.
         t1, t2: s.
         detuning_sigma: rad/s; amplitude_sigma: relative. Of errors that stand still.
         detuning_spectrum, amplitude_spectrum: of errors that do not.
@@ -78,6 +80,7 @@ class Effects:
     cells: int = 4
     anharmonicity: float | None = None
     levels: int = 3
+    on_ladder: bool = False
     t1: float | None = None
     t2: float | None = None
     detuning_sigma: float = 0.0
@@ -185,9 +188,14 @@ class _Bench:
         drive, cell = path.at_qubit(samples, self.rate, cells)
         return drive, np.full(len(drive), cell)
 
+    def gate(self, drive, durations, eps=0.0, delta=0.0):
+        """Unitary of the model that the search had: two levels, or the ladder."""
+        effects = self.effects
+        ladder = (effects.levels, effects.anharmonicity) if effects.on_ladder else (2, 0.0)
+        return independent.gate(drive, durations, eps, effects.detuning + delta, *ladder)
+
     def vector(self, drive, durations, eps=0.0, delta=0.0):
-        unitary = independent.gate(drive, durations, eps, self.effects.detuning + delta)
-        return independent.rotation_error(unitary, self.target)
+        return independent.rotation_error(self.gate(drive, durations, eps, delta), self.target)
 
     def cost(self, vector) -> float:
         """Infidelity of a rotation error alone."""
@@ -212,9 +220,8 @@ class _Bench:
             vectors["grid"] = self.continuous() - arrived
         if effects.carrier is not None:
             self.beyond_rotating_wave = self.lab_frame()
-            drive, durations = self.arrived
-            unitary = independent.gate(drive, durations, 0.0, effects.detuning)
-            moved = independent.rotation_error(self.beyond_rotating_wave @ unitary, self.target)
+            block = self.gate(*self.arrived)[:2, :2]
+            moved = independent.rotation_error(self.beyond_rotating_wave @ block, self.target)
             vectors["rotating wave"] = moved - arrived
         else:
             self.beyond_rotating_wave = np.eye(2)
@@ -240,7 +247,8 @@ class _Bench:
     def continuous(self):
         """Rotation error without a grid: the integrator, or a much finer grid."""
         path = self.effects.path
-        if path.line is not None and path.calibration is None and not path.intermediate_frequency:
+        followed = path.line is not None and path.calibration is None
+        if followed and not path.intermediate_frequency and not self.effects.on_ladder:
             until = len(self.samples) / self.rate + path.line.reach
             unitary = independent.integrated(
                 path.line, self.samples, self.rate, until, 0.0, self.effects.detuning
@@ -264,6 +272,7 @@ class _Bench:
             drive, durations, 0.0, effects.detuning, effects.levels, effects.anharmonicity
         )
         vector = independent.rotation_error(unitary, self.target) - self.vector(drive, durations)
+        # zero where the search was on the ladder: then its phase errors are the search's
         lost = independent.leakage(independent.superoperator(unitary))
         return lost + self.cost(vector), vector
 

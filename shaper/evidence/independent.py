@@ -61,12 +61,17 @@ def gate(
 
 
 def gates(
-    drive: np.ndarray, durations: np.ndarray, eps: np.ndarray, delta: np.ndarray
+    drive: np.ndarray,
+    durations: np.ndarray,
+    eps: np.ndarray,
+    delta: np.ndarray,
+    levels: int = 2,
+    anharmonicity: float = 0.0,
 ) -> np.ndarray:
-    """[grid, 2, 2] complex: ``gate`` of a qubit at many errors ``eps``, ``delta`` [grid]."""
-    total = np.tile(np.eye(2, dtype=complex), (len(eps), 1, 1))
+    """[grid, level, level] complex: ``gate`` at many errors ``eps``, ``delta`` [grid]."""
+    total = np.tile(np.eye(levels, dtype=complex), (len(eps), 1, 1))
     for rate, duration in zip(np.asarray(drive), durations, strict=True):
-        h = hamiltonian(np.tile(rate, (len(eps), 1)), eps, delta)
+        h = hamiltonian(np.tile(rate, (len(eps), 1)), eps, delta, levels, anharmonicity)
         total = expm(-1j * h * duration) @ total
     return total
 

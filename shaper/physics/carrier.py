@@ -111,8 +111,8 @@ def propagate_with_shift(
 ) -> np.ndarray:
     """What first-order theory says of the carrier: the Bloch-Siegert shift, and the kicks.
 
-    The counter-rotating part ``V = (Z e^(2 i w t) s+ + h.c.)/2``, ``Z = Wx + i Wy``, averages out but
-    for two things. Where the drive stands it shifts the resonance by ``|Z|^2/(4 w)``. Where it
+    The counter-rotating part ``V = (Z e^(2 i w t) s+ + h.c.)/2``, ``Z = Wx + i Wy``, averages out
+    but for two things. Where the drive stands it shifts the resonance by ``|Z|^2/(4 w)``. Where it
     jumps, at both ends too, it kicks by ``exp(-i S)``, ``S = (Z e^(2 i w t)/(2 i w) s+ + h.c.)/2``.
     A pulse without jumps feels the shift only; what is left falls as ``1/w^2``.
 

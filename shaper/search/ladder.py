@@ -16,6 +16,7 @@ import jax
 import jax.numpy as jnp
 import numpy as np
 
+from shaper.drive.line import filtered
 from shaper.physics import leakage as quality
 from shaper.physics.ladder import Ladder, derivative_corrected, plan, propagate_qubit
 from shaper.rotation import euler_yxy
@@ -69,6 +70,7 @@ def search_ladder(
     leakage_weight: float = 1.0,
     seed: int = 0,
     warm: np.ndarray | None = None,
+    kernel: np.ndarray | None = None,
 ) -> LadderPulse:
     """The best pulse found for a gate on a ladder.
 
@@ -82,11 +84,13 @@ def search_ladder(
         stop: no further start once the mean cost is at most this.
         leakage_weight: what lost population counts against a wrong rotation.
         warm: [slice, 2] rad/s, a first guess of the caller's, tried first.
+        kernel: of ``drive.line.Taps`` on the slice clock: the search then sees what arrives
+            behind the line, tail included. None: no line.
     """
     eps, delta = np.broadcast_arrays(
         np.atleast_1d(np.asarray(eps, dtype=float)), np.atleast_1d(np.asarray(delta, dtype=float))
     )
-    errors = _amplitudes(ladder, target, slice_duration, rabi_max, bound, leakage_weight)
+    errors = _amplitudes(ladder, target, slice_duration, rabi_max, bound, leakage_weight, kernel)
     descend = jax.jit(_descent(errors, jnp.asarray(eps), jnp.asarray(delta), iterations))
     lost = jax.jit(lambda x: jax.vmap(lambda e, d: errors(x, e, d) @ errors(x, e, d))(eps, delta))
     even = np.full(len(eps), 1 / len(eps))
@@ -101,7 +105,7 @@ def search_ladder(
             break
     best = _toward_worst(descend, lost, best, even, rounds)
     drive = np.asarray(bounded(best, rabi_max, bound))
-    columns = _columns(ladder, drive, slice_duration, rabi_max, bound, eps, delta)
+    columns = _columns(ladder, drive, slice_duration, rabi_max, bound, eps, delta, kernel)
     return LadderPulse(
         drive,
         quality.infidelity(columns, target),
@@ -140,25 +144,39 @@ def _plan(ladder, slice_duration, rabi_max, bound, eps, delta):
     return plan(ladder, slice_duration, largest, float(np.max(np.abs(delta))))
 
 
-def _columns(ladder, drive, slice_duration, rabi_max, bound, eps, delta) -> np.ndarray:
+def _columns(ladder, drive, slice_duration, rabi_max, bound, eps, delta, kernel=None) -> np.ndarray:
     """[grid, level, 2] complex."""
-    steps = _plan(ladder, slice_duration, rabi_max, bound, eps, delta)
-    re, im = propagate_qubit(
-        ladder, steps, jnp.asarray(drive), slice_duration, jnp.asarray(eps), jnp.asarray(delta)
-    )
+    drive, step = _arrived(jnp.asarray(drive), slice_duration, kernel)
+    steps = _plan(ladder, step, _overshoot(kernel) * rabi_max, bound, eps, delta)
+    re, im = propagate_qubit(ladder, steps, drive, step, jnp.asarray(eps), jnp.asarray(delta))
     return np.asarray(re) + 1j * np.asarray(im)
 
 
-def _amplitudes(ladder, target, slice_duration, rabi_max, bound, leakage_weight) -> Callable:
+def _arrived(drive: Array, slice_duration: float, kernel) -> tuple[Array, float]:
+    """Drive at the qubit and the length of its slices."""
+    if kernel is None:
+        return drive, slice_duration
+    return filtered(kernel, drive), slice_duration / kernel.shape[1]
+
+
+def _overshoot(kernel) -> float:
+    """Largest gain of the line for any waveform within its bound."""
+    return 1.0 if kernel is None else float(np.max(np.sum(np.abs(kernel), axis=0)))
+
+
+def _amplitudes(
+    ladder, target, slice_duration, rabi_max, bound, leakage_weight, kernel=None
+) -> Callable:
     """``(x, eps, delta) -> [component]``, real; the sum of squares is the cost of one point."""
     rows = quality.qubit_rows(target)
     outside = math.sqrt(leakage_weight) * quality.outside_columns(target)
     # room for 10 % amplitude and 10 % detuning error: the series then serve every grid point
-    steps = _plan(ladder, slice_duration, rabi_max, bound, 0.1, 0.1 * rabi_max)
+    step = slice_duration if kernel is None else slice_duration / kernel.shape[1]
+    steps = _plan(ladder, step, _overshoot(kernel) * rabi_max, bound, 0.1, 0.1 * rabi_max)
 
     def errors(x, eps, delta):
-        drive = bounded(x, rabi_max, bound)
-        re, im = propagate_qubit(ladder, steps, drive, slice_duration, eps[None], delta[None])
+        drive, step = _arrived(bounded(x, rabi_max, bound), slice_duration, kernel)
+        re, im = propagate_qubit(ladder, steps, drive, step, eps[None], delta[None])
         re, im = re[0], im[0]
         parts = []
         for weights, spec, level in (

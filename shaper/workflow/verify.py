@@ -94,9 +94,10 @@ def verify(
 
 
 def check_claims(pulse: Pulse, score: Score, target: Target, effects: Effects) -> tuple[Claim, ...]:
-    """Every stored infidelity of one pulse beside its recomputation, two levels, no decay.
+    """Every stored infidelity of one pulse beside its recomputation, without decay.
 
-    Behind a path that the search saw, the figures are those at the qubit, the path included.
+    The figures are those of the model that the search had: behind the path that it saw, on the
+    levels that it saw.
     """
     path = effects.path
     if effects.correction != "model":
@@ -117,7 +118,7 @@ def check_claims(pulse: Pulse, score: Score, target: Target, effects: Effects) -
         ),
     ):
         drive, durations = _at_qubit(path, samples, pulse.sample_rate, effects.cells)
-        found = _figures(drive, durations, target, effects.detuning, sides)
+        found = _figures(drive, durations, target, effects, sides)
         for kind, stored, value in zip(("nominal", "mean", "worst"), claimed, found, strict=True):
             if not np.isnan(stored):
                 claims.append(Claim(f"{label}, {kind}", stored, value, _agree(stored, value)))
@@ -226,9 +227,10 @@ def _at_qubit(path, samples, sample_rate, cells):
     return samples[starts], np.diff(np.append(starts, len(samples))) / sample_rate
 
 
-def _figures(drive, durations, target, detuning, sides) -> tuple[float, float, float]:
+def _figures(drive, durations, target, effects, sides) -> tuple[float, float, float]:
     """Nominal, mean and worst infidelity by matrix exponentials."""
 
+    ladder = (effects.levels, effects.anharmonicity) if effects.on_ladder else (2, 0.0)
     rules, even = [], []
     for half in sides:
         x, w = np.polynomial.legendre.leggauss(_MEAN_POINTS)
@@ -237,7 +239,7 @@ def _figures(drive, durations, target, detuning, sides) -> tuple[float, float, f
 
     def lost(axes):
         eps, delta = (v.ravel() for v in np.meshgrid(*axes, indexing="ij"))
-        unitaries = independent.gates(drive, durations, eps, detuning + delta)
+        unitaries = independent.gates(drive, durations, eps, effects.detuning + delta, *ladder)
         return np.array(
             [independent.infidelity(independent.superoperator(u), target) for u in unitaries]
         )
