@@ -107,8 +107,8 @@ def maps(comparison: Comparison, names: Sequence[str] | None = None) -> dict:
     """Infidelity over both errors, see ``evidence.tables.map_table``; reach as of the cuts.
 
     Args:
-        names: which pulses; default: those of the file, the verdict's two, and the best others,
-            six in all.
+        names: which pulses; default: the shaped ones, the verdict's two, the baseline and the
+            most robust others, six in all.
     """
     job = comparison.job
     side = np.linspace(-1, 1, _MAP_POINTS)
@@ -118,12 +118,13 @@ def maps(comparison: Comparison, names: Sequence[str] | None = None) -> dict:
 
 
 def _worth_a_map(comparison: Comparison) -> list[str]:
-    """The shaped pulses, then the others by their worst case, six at most."""
-    rows = sorted(comparison.rows, key=lambda row: (row.origin != "optimized", row.worst))
-    baseline = [row for row in rows if row.name in ("sandwich", "plain")]
-    first = [row for row in rows if row.origin == "optimized"][:2] + baseline[:1]
-    rest = [row for row in rows if row not in first]
-    return [row.name for row in [*first, *rest][:_MOST_MAPS]]
+    """Shaped pulses, the verdict's two, the baseline, then the most robust others; six at most."""
+    rows, verdict = comparison.rows, comparison.verdict
+    chosen = [row.name for row in rows if row.origin == "optimized"][:2]
+    chosen += [row.name for row in (verdict.winner, verdict.rival) if row is not None]
+    chosen += [row.name for row in rows if row.name in ("sandwich", "plain")][:1]
+    chosen += [row.name for row in sorted(rows, key=lambda row: row.worst_known)]
+    return list(dict.fromkeys(chosen))[:_MOST_MAPS]
 
 
 def as_json(comparison: Comparison) -> dict:
