@@ -74,7 +74,7 @@ def test_wide_grid_is_carried_in_blocks(rng):
         assert np.max(np.abs(together[k] - alone[0])) < EXACT
 
 
-@pytest.mark.parametrize("levels", [3, 5])
+@pytest.mark.parametrize("levels", [3, 4])
 def test_gradient_is_the_central_difference(rng, levels):
     ladder = Ladder(-210 * MHZ, levels)
     drive = rng.normal(0, 40 * MHZ, (12, 2))

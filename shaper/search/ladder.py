@@ -213,26 +213,26 @@ def _descent(errors: Callable, eps: Array, delta: Array, iterations: int) -> Cal
         size = x.size
 
         def step(state):
-            count, x, damping, cost, normal, gradient = state
-            scale = jnp.trace(normal) / size
-            move = jnp.linalg.solve(normal + damping * scale * jnp.eye(size), gradient)
-            trial = x - move.reshape(x.shape)
+            count, best, trial, damping, cost, normal, gradient = state
             new = linearize(trial, weight)
             better = new[0] < cost
-            x = jnp.where(better, trial, x)
+            best = jnp.where(better, trial, best)
             damping = jnp.where(better, damping / 4, damping * 5)
-            kept = [
+            cost, normal, gradient = (
                 jnp.where(better, a, b) for a, b in zip(new, (cost, normal, gradient), strict=True)
-            ]
-            return (count + 1, x, damping, *kept)
+            )
+            scale = jnp.trace(normal) / size
+            move = jnp.linalg.solve(normal + damping * scale * jnp.eye(size), gradient)
+            return count + 1, best, best - move.reshape(x.shape), damping, cost, normal, gradient
 
         def unfinished(state):
-            count, _, damping, cost, *_ = state
+            count, _, _, damping, cost, *_ = state
             return (count < iterations) & (damping < _LARGEST_DAMPING) & (cost > _STILL)
 
-        start = (0, x, _FIRST_DAMPING, *linearize(x, weight))
-        end = jax.lax.while_loop(unfinished, step, start)
-        return end[1], end[3]
+        # the first pass only linearizes at x: anything is better than infinity
+        nothing = (jnp.inf, jnp.eye(size), jnp.zeros(size))
+        end = jax.lax.while_loop(unfinished, step, (0, x, x, _FIRST_DAMPING, *nothing))
+        return end[1], end[4]
 
     return descend
 
@@ -244,6 +244,8 @@ def _toward_worst(descend, lost, x, even, rounds):
         C. L. Lawson, thesis, University of California, Los Angeles (1961): weights of a
         least-squares fit multiplied by the error until the fit is the minimax one.
     """
+    if rounds == 0:
+        return x
     weight, best, lowest = even, x, float(np.max(lost(x)))
     for _ in range(rounds):
         now = np.asarray(lost(x))
