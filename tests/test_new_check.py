@@ -14,6 +14,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.optimize import minimize
 
+from shaper.bench import error_grid
 from shaper.cli import main
 from shaper.cli.new import GATES
 from shaper.composite import time_optimal
@@ -27,6 +28,7 @@ from shaper.rotation import from_axis_angle
 from shaper.target import Target, infidelity
 from shaper.workflow.check import check_job, least_worst_infidelity
 from shaper.workflow.new import Wish, new_job
+from shaper.workflow.trial import errors
 
 TABLE_DIGITS = 1e-9  # relative; figures of this module are rounded to twelve digits
 
@@ -316,6 +318,35 @@ def test_a_duration_that_suffices_has_no_floor():
     assert least_worst_infidelity(job_with(("60.0\nslice", "27.0\nslice"))) is None
     assert least_worst_infidelity(job_with(("60.0\nslice", "26.0\nslice"))) > 0
     assert "(infidelity at least" in warnings_of(("60.0\nslice", "26.0\nslice"))[0]
+
+
+ROBUST = ("[pulse]", "[tolerance]\namplitude = 0.05\ndetuning_MHz = 2.5\n[pulse]")
+
+
+def test_a_tolerance_out_of_reach_is_warned_of():
+    # 4 pi / W_max is 80 ns; the known best there is about 2e-4, at 30 ns no more than 1e-2
+    goal = ("[tolerance]", "[search]\nstop_infidelity = 1e-3\n[tolerance]")
+    long = check_job(job_with(ROBUST, goal, ("60.0\nslice", "80.0\nslice")), trial=True)
+    assert 1e-4 < long["trial_worst_infidelity"] < 1e-3
+    assert not any("out of reach" in w for w in long["warnings"])
+    short = check_job(job_with(ROBUST, goal, ("60.0\nslice", "30.0\nslice")), trial=True)
+    assert any("out of reach in 30 ns" in w and "--shortest" in w for w in short["warnings"])
+    assert check_job(job_with(ROBUST, goal))["trial_worst_infidelity"] is None
+
+
+def test_the_trials_slopes_are_those_of_central_differences(rng):
+    job = job_with(ROBUST)
+    grid, durations = error_grid(job, 3, 5), np.full(12, 5e-9)
+    phases = rng.uniform(-3, 3, 12)
+    slopes = errors(phases, durations, job, grid)[1]
+    step = 1e-6
+    for k in range(12):
+        moved = [
+            errors(phases + sign * step * np.eye(12)[k], durations, job, grid)[0]
+            for sign in (1, -1)
+        ]
+        central = (moved[0] - moved[1]) / (2 * step)
+        np.testing.assert_allclose(slopes[:, k], central, atol=1e-9)  # step^2 and round-off/step
 
 
 def test_box_bound_says_best_known():

@@ -29,6 +29,12 @@ def add(commands):
         type=float,
         help="bandwidth (-3 dB) of the drive line, to warn of pulses wider than it",
     )
+    command.add_argument(
+        "--no-trial",
+        action="store_true",
+        help="leave out the short trial search that a job with a tolerance and a "
+        "stop_infidelity gets",
+    )
     command.add_argument("--json", action="store_true", help="print one JSON object, nothing else")
     return command
 
@@ -46,7 +52,7 @@ def run(args) -> int:
     line = args.line_MHz
     if line is not None and not line > 0:
         raise InputError(f"--line-MHz: expected a positive number, got {line:g}")
-    facts = check_job(job, line and line * 1e6)
+    facts = check_job(job, line and line * 1e6, trial=not args.no_trial)
     if args.json:
         print(json.dumps(facts, indent=2, ensure_ascii=False))
         return 0

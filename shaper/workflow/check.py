@@ -9,18 +9,22 @@ from shaper.drive.dac import padded_length
 from shaper.job import Job
 from shaper.physics.decay import coherence_limit
 from shaper.units import DEG, MHZ, NS
+from shaper.workflow.trial import trial_infidelity
 
 _HAIR = 1e-9  # relative; a duration this close below the limit is the limit
 _COARSE_SLICE = math.pi / 2  # a slice that turns further than this can hardly follow any shape
+_TRIAL_MISSES_BY = 10.0  # the most by which the real search was seen to beat the trial, or so
 _LEAKY_PERIODS = 2.0  # of the anharmonicity; a pulse shorter than this excites the next level
 
 
-def check_job(job: Job, line_bandwidth: float | None = None) -> dict:
+def check_job(job: Job, line_bandwidth: float | None = None, trial: bool = False) -> dict:
     """Derived figures of a job and what speaks against running it.
 
     Args:
         line_bandwidth: Hz, -3 dB point of the drive line to either side of the carrier; None if
             not known.
+        trial: whether a job with a tolerance and a ``stop_infidelity`` gets a short trial search
+            (a few seconds) to see if the one is within reach of the other.
     Returns:
         A flat dict, unit in each key, None where a figure has no meaning; ``warnings`` is a
         list of sentences, each with its remedy.
@@ -29,6 +33,8 @@ def check_job(job: Job, line_bandwidth: float | None = None) -> dict:
     plain = place(sandwich(job.target, job.bound), job)
     samples = job.slices * job.samples_per_slice
     padded = padded_length(samples, job.granularity, job.min_samples)
+    asks = trial and job.has_tolerance and job.stop_infidelity is not None
+    reached = trial_infidelity(job) if asks and job.bound == "circle" else None
     decays = job.t1 is not None or job.t2 is not None
     facts = {
         "title": job.title,
@@ -47,12 +53,13 @@ def check_job(job: Job, line_bandwidth: float | None = None) -> dict:
         ),
         "duration_over_shortest": job.duration / shortest if shortest > 0 else None,
         "least_worst_infidelity": least_worst_infidelity(job),
+        "trial_worst_infidelity": reached,
         "sandwich_duration_ns": plain.duration / NS,
         "coherence_limited_infidelity": (
             coherence_limit(job.duration, job.t1, job.t2) if decays else None
         ),
         "frame_update": frame_update(job),
-        "warnings": _warnings(job, shortest, padded - samples, line_bandwidth),
+        "warnings": _warnings(job, shortest, padded - samples, line_bandwidth, reached),
     }
     return {
         key: float(f"{value:.12g}") if isinstance(value, float) else value  # 120, not 120.00..01
@@ -97,10 +104,17 @@ def frame_update(job: Job) -> str | None:
     return None
 
 
-def _warnings(job: Job, shortest: float, padding: int, line_bandwidth: float | None) -> list[str]:
+def _warnings(
+    job: Job,
+    shortest: float,
+    padding: int,
+    line_bandwidth: float | None,
+    reached: float | None,
+) -> list[str]:
     found = [
         _too_short(job, shortest),
         _too_few_slices(job),
+        _out_of_reach(job, reached),
         _frame(job),
         _decay(job),
         _leakage(job),
@@ -151,6 +165,16 @@ def _too_few_slices(job: Job) -> str | None:
             "take slices of at most 90 degrees, better a tenth of that"
         )
     return None
+
+
+def _out_of_reach(job: Job, reached: float | None) -> str | None:
+    if reached is None or reached <= _TRIAL_MISSES_BY * job.stop_infidelity:
+        return None
+    return (
+        f"search.stop_infidelity: {job.stop_infidelity:.2g} over the tolerance looks out of reach "
+        f"in {job.duration / NS:.6g} ns: a short trial came to {reached:.1e}. Lengthen the pulse, "
+        "or let --shortest find the duration"
+    )
 
 
 def _frame(job: Job) -> str | None:

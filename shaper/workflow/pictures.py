@@ -139,8 +139,8 @@ def pictures(found: dict, job: Job) -> list[Picture]:
         drawn.append(
             _drawn(
                 "Search",
-                "What every start had reached. A later stage measures harder, nearer to the worst case, so "
-                "its lines may lie higher.",
+                "What every start had reached. A later stage measures harder, nearer to the worst "
+                "case, so its lines may lie higher.",
                 "How the infidelity of each start fell during the search.",
                 lambda theme: figures.history_figure(
                     found["history"], stop_infidelity=job.stop_infidelity, theme=theme
