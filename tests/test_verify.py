@@ -1,6 +1,7 @@
 """The second opinion, the error budget, and the command that prints them."""
 
 import json
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -26,6 +27,7 @@ from shaper.workflow.verify import check_claims, effects_of, verify, with_eviden
 MHZ, NS, US = 2e6 * np.pi, 1e-9, 1e-6
 CLOSE = 1e-12
 FULL = 25 * MHZ
+DATA = Path(__file__).resolve().parent.parent / "configs" / "alder_data"
 
 JOB = """
 title = "Quarter-turn phase gate, Alder bench, qubit 1"
@@ -346,3 +348,55 @@ def test_verify_from_python(waveform):
     assert set(again.pulses) == set(waveform.pulses)
     with pytest.raises(InputError):
         verify(waveform, ["nothing"])
+
+
+BENCH = """
+[line]
+kind = "step_response"
+file = "step_response.csv"
+[mixer]
+gain = 1.02
+phase_deg = 1.0
+[noise]
+detuning_sigma_kHz = 20.0
+detuning_psd_file = "noise_spectrum.csv"
+"""
+
+
+def test_effects_come_from_the_job():
+    """Every section of the bench reaches the budget, in SI; files beside the job."""
+    job = parse_job(JOB + BENCH, folder=DATA)
+    effects = effects_of(job, on_ladder=True)
+    assert effects.path.line.bandwidth > 100e6
+    assert effects.path.calibration == Calibration(gain=1.02, phase=np.radians(1.0))
+    assert effects.detuning_sigma == pytest.approx(0.02 * MHZ)
+    assert effects.detuning_spectrum.density[0] == pytest.approx((2 * np.pi) ** 2 * 1020)
+    assert effects.on_ladder
+    assert effects.levels == 3
+    plain = effects_of(parse_job(JOB))
+    assert plain.path.straight
+    assert not plain.on_ladder
+    slow = BENCH.replace("step_response", "first_order").replace(
+        'file = "first_order.csv"', "bandwidth_MHz = 5.0"
+    )
+    with pytest.raises(InputError, match="at least 1/duration = 16.67 MHz, got 5 MHz"):
+        effects_of(parse_job(JOB + slow, folder=DATA))
+
+
+def test_claims_behind_the_line_hold(job, pulse):
+    """What the search sees behind its own grid is what the second opinion sees."""
+    line_job = parse_job(JOB + BENCH.split("[mixer]")[0], folder=DATA)
+    effects = effects_of(line_job)
+    kernel = taps(effects.path.line, NS, 4).kernel
+
+    def lost(samples):
+        fine = filtered(kernel, samples)
+        q = propagate(fine, np.full(len(fine), NS / 4), 0.0, 0.0)
+        return float(infidelity(q, job.target))
+
+    played = np.repeat(pulse.drive, pulse.samples, axis=0)
+    nominal = lost(played)
+    stored = Score(nominal, np.nan, np.nan, np.nan, np.nan, np.nan)
+    (claim,) = check_claims(pulse, stored, job.target, effects)
+    assert claim.holds
+    assert nominal > 1e-6  # the pulse knows nothing of the line

@@ -31,7 +31,12 @@ def add(commands):
         "--carrier-GHz",
         metavar="F",
         type=float,
-        help="carrier frequency: adds the error of the rotating-wave approximation",
+        help="carrier frequency, where the job names none: adds the rotating-wave error",
+    )
+    command.add_argument(
+        "--data",
+        metavar="FOLDER",
+        help="where the files that the job names lie (default: beside FILE.h5)",
     )
     command.add_argument("--json", action="store_true", help="print one JSON object")
     command.add_argument("--figure", metavar="FILE", help="draw the budget (.png, .svg, .pdf)")
@@ -44,20 +49,30 @@ def add(commands):
 def run(args) -> int:
     """Run it; returns the exit code."""
     from dataclasses import replace
+    from pathlib import Path
 
     from shaper.errors import InputError
     from shaper.job import parse_job
     from shaper.store import load_waveform, save_waveform
     from shaper.units import MHZ
-    from shaper.workflow.verify import as_json, draw, effects_of, verify, with_evidence
+    from shaper.workflow.verify import (
+        as_json,
+        draw,
+        effects_of,
+        searched_on_ladder,
+        verify,
+        with_evidence,
+    )
 
     waveform = load_waveform(args.file)
-    effects = effects_of(parse_job(waveform.job_text, "job in the file"))
+    folder = Path(args.file).parent if args.data is None else Path(args.data)
+    job = parse_job(waveform.job_text, "job in the file", folder)
+    effects = effects_of(job, searched_on_ladder(waveform))
     if args.carrier_GHz is not None:
         if not 0 < args.carrier_GHz < 1e6:
             raise InputError(f"--carrier-GHz: expected a frequency, got {args.carrier_GHz:g}")
         effects = replace(effects, carrier=args.carrier_GHz * 1e3 * MHZ)
-    found = verify(waveform, args.pulse, effects)
+    found = verify(waveform, args.pulse, effects, folder)
     if not args.keep_file:
         save_waveform(args.file, with_evidence(waveform, found))
         print(f"shaper: evidence stored in {args.file}", file=sys.stderr)

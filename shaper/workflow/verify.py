@@ -9,14 +9,20 @@ from pathlib import Path
 import numpy as np
 
 from shaper.drive import dac
+from shaper.drive.line import CHANGE_WHEN_DOUBLED, cells_needed
 from shaper.errors import InputError
 from shaper.evidence import independent
 from shaper.evidence.budget import SOURCES, Budget, Effects, error_budget
 from shaper.job import Job, parse_job
+from shaper.physics.noise import read_spectrum
 from shaper.pulse import Pulse, Score, Table, Waveform
 from shaper.target import Target
+from shaper.wiring import path_of
 
 RELATIVE = 0.01  # how far a claim may be off; grids differ, physics does not
+GRID = 2 * CHANGE_WHEN_DOUBLED  # infidelity; what two grids behind a line may differ by
+_HERTZ_SQUARED = (2 * np.pi) ** 2  # (rad/s)^2
+_CELLS_WITHOUT_LINE = 16  # per sample, where skew or an intermediate frequency turn within one
 _WORST_POINTS = 13  # per axis, evenly spaced, edges included
 _MEAN_POINTS = 9  # per axis, Gauss-Legendre
 
@@ -57,12 +63,30 @@ class Verification:
         return all(claim.holds for claim in self.claims)
 
 
-def effects_of(job: Job) -> Effects:
-    """What the budget reckons with on the bench of a job."""
+def effects_of(job: Job, on_ladder: bool = False) -> Effects:
+    """What the budget reckons with on the bench of a job.
+
+    Args:
+        on_ladder: whether the search had the upper levels in its model.
+    Raises:
+        InputError: if a file that the job names is not what it should be.
+    """
+    noise = job.noise
+    spectrum = None
+    if noise.detuning_spectrum is not None:
+        spectrum = read_spectrum(noise.detuning_spectrum, unit=_HERTZ_SQUARED)
     return Effects(
+        path=path_of(job),
+        correction=job.correction,
         anharmonicity=job.anharmonicity,
+        levels=job.levels,
+        on_ladder=on_ladder and job.anharmonicity is not None,
         t1=job.t1,
         t2=job.t2,
+        detuning_sigma=noise.detuning_sigma,
+        amplitude_sigma=noise.amplitude_sigma,
+        detuning_spectrum=spectrum,
+        carrier=job.carrier,
         amplitude_tolerance=job.amplitude_tolerance,
         detuning_tolerance=job.detuning_tolerance,
         detuning=job.detuning,
@@ -70,7 +94,10 @@ def effects_of(job: Job) -> Effects:
 
 
 def verify(
-    waveform: Waveform, names: Sequence[str] = (), effects: Effects | None = None
+    waveform: Waveform,
+    names: Sequence[str] = (),
+    effects: Effects | None = None,
+    folder: str | Path = ".",
 ) -> dict[str, Verification]:
     """Recompute what a file claims about its pulses, and make their error budgets.
 
@@ -78,19 +105,38 @@ def verify(
         waveform: as ``shaper.load_waveform`` gives it.
         names: which pulses; default: the optimized ones, or all where there are none; "all".
         effects: default: those of the job in the file.
+        folder: where the files that the job names lie.
     Raises:
         InputError: if the job in the file is not valid, or a pulse is not there.
     """
-    job = parse_job(waveform.job_text, "job in the file")
-    effects = effects or effects_of(job)
+    job = parse_job(waveform.job_text, "job in the file", folder)
+    effects = effects or effects_of(job, searched_on_ladder(waveform))
     found = {}
     for name in _chosen(waveform, names):
         pulse = waveform.pulses[name]
+        here = replace(effects, cells=_cells(pulse, effects))
         found[name] = Verification(
-            check_claims(pulse, waveform.scores[name], job.target, effects),
-            error_budget(pulse, job.target, effects),
+            check_claims(pulse, waveform.scores[name], job.target, here),
+            error_budget(pulse, job.target, here),
         )
     return found
+
+
+def searched_on_ladder(waveform: Waveform) -> bool:
+    """Whether the file says that its search had more levels than two in its model."""
+    levels = waveform.history_attrs.get("levels", 2)
+    return isinstance(levels, int | float) and levels > 2
+
+
+def _cells(pulse: Pulse, effects: Effects) -> int:
+    """Cells per sample at which the grid no longer matters."""
+    path = effects.path
+    if path.straight:
+        return 1
+    if path.line is None:
+        return _CELLS_WITHOUT_LINE
+    floats = np.repeat(pulse.drive, pulse.samples, axis=0)
+    return cells_needed(path.line, floats, 1 / pulse.sample_rate)
 
 
 def check_claims(pulse: Pulse, score: Score, target: Target, effects: Effects) -> tuple[Claim, ...]:
@@ -121,7 +167,8 @@ def check_claims(pulse: Pulse, score: Score, target: Target, effects: Effects) -
         found = _figures(drive, durations, target, effects, sides)
         for kind, stored, value in zip(("nominal", "mean", "worst"), claimed, found, strict=True):
             if not np.isnan(stored):
-                claims.append(Claim(f"{label}, {kind}", stored, value, _agree(stored, value)))
+                holds = _agree(stored, value, 0.0 if path.straight else GRID)
+                claims.append(Claim(f"{label}, {kind}", stored, value, holds))
         if label == "codes" and score.guaranteed is not None:
             above = score.guaranteed >= found[2] - independent.RESOLUTION
             claims.append(Claim("codes, guaranteed", score.guaranteed, found[2], above))
@@ -252,5 +299,6 @@ def _figures(drive, durations, target, effects, sides) -> tuple[float, float, fl
     return nominal, mean, max(float(np.max(lost(even))), nominal)
 
 
-def _agree(claimed: float, found: float) -> bool:
-    return bool(abs(claimed - found) <= RELATIVE * max(claimed, found) + independent.RESOLUTION)
+def _agree(claimed: float, found: float, grid: float) -> bool:
+    resolution = max(grid, independent.RESOLUTION)
+    return bool(abs(claimed - found) <= RELATIVE * max(claimed, found) + resolution)
