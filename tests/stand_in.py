@@ -19,6 +19,8 @@ import threading
 from collections import deque
 from dataclasses import dataclass, field
 
+import numpy as np
+
 MAX_TEXT = 1 << 20  # bytes of a message without its blocks
 QUEUE = 32  # errors kept (the last one becomes -350)
 BLOCK_MARK = "\x01"  # where a block stood in the text of a message
@@ -471,11 +473,9 @@ def trace_name(text) -> str:
     return text.upper()
 
 
-def swap(data) -> bytearray:
+def swap(data) -> memoryview:
     """Every two bytes exchanged."""
-    out = bytearray(len(data))
-    out[0::2], out[1::2] = data[1::2], data[0::2]
-    return out
+    return memoryview(np.frombuffer(data, np.uint16).byteswap()).cast("B")
 
 
 def split_outside_quotes(text: str, separator: str) -> list[str]:

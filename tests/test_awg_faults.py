@@ -35,7 +35,7 @@ CODES = {
     "refuse": {1, 4},  # 4 if it was OFF that was refused
     "flood": {1},
     "garbage": {1},
-    "wrong_order": {5, 0},  # 0 if it struck in one direction only, before anything counted
+    "wrong_order": {5, 0},  # 0 if it struck where the order asked for was the one it keeps
     "deaf": {4, 0},  # 0 if the outputs were off anyway
     "switches_on": {4, 0},  # 0 if it struck before OFF was sent
     "no_entry": {1},

@@ -187,18 +187,32 @@ def test_questions_of_the_profile(rng, record_path, answer, fine):
     assert bool(generator.traces) == fine
 
 
-def test_wrong_byte_order_both_ways_is_found(rng, record_path):
-    """Such an instrument reads back equal, and plays noise."""
-    for order in ("big", "little"):
-        fault = stand_in.Fault("wrong_order", lasting=True)
-        made = plan(rng, into=profile(data={"byte_order": order}))
-        with stand_in.running(stand_in.Generator(faults=[fault])) as (generator, address):
-            if order == "big":
-                run_load(made, address, record_path)  # it happens to be right
-            else:
-                with pytest.raises(ReadBackError, match="byte order"):
-                    run_load(made, address, record_path)
-                assert generator.traces == {}
+@pytest.mark.parametrize("order, words", [("big", "in the same"), ("little", "byte order: exp")])
+def test_wrong_byte_order_both_ways_is_found(rng, record_path, order, words):
+    """Such an instrument reads back equal, and may play noise."""
+    fault = stand_in.Fault("wrong_order", lasting=True)
+    made = plan(rng, into=profile(data={"byte_order": order}))
+    with stand_in.running(stand_in.Generator(faults=[fault])) as (generator, address):
+        with pytest.raises(ReadBackError, match=words):
+            run_load(made, address, record_path)
+        assert generator.traces == {}
+
+
+def test_wrong_byte_order_that_begins_after_the_proof_is_found(rng, record_path):
+    made = plan(rng, into=profile(data={"byte_order": "little"}))
+    faults = [stand_in.Fault("wrong_order", at=22) for _ in range(2)]  # writing, then reading
+    with stand_in.running(stand_in.Generator(faults=faults)) as (generator, address):
+        with pytest.raises(ReadBackError, match="SHAPED_I"):
+            run_load(made, address, record_path)
+        assert generator.traces == {}
+
+
+@pytest.mark.parametrize("lacks", [["order_little"], ["order_little", "order_big"]])
+def test_an_instrument_with_one_byte_order(rng, record_path, lacks):
+    made = plan(rng, into=profile(commands=dict.fromkeys(lacks, "")))
+    with stand_in.running() as (generator, address):
+        run_load(made, address, record_path)
+        assert holds(generator, made)
 
 
 def test_an_instrument_without_a_catalog_needs_replace(rng, record_path):

@@ -152,13 +152,21 @@ class Instrument:
 
     # -- memory --------------------------------------------------------------------------------
 
+    @property
+    def both_orders(self) -> bool:
+        """Whether the instrument can be asked for either byte order."""
+        return bool(self.says.order_big and self.says.order_little)
+
     def formats(self, *, text: bool = False) -> None:
         """How data are to be answered and taken: words in the profile's byte order, or text."""
-        big = self.profile.data.byte_order == "big"
-        order = self.says.order_big if big else self.says.order_little
-        for command in (self.says.format_text if text else self.says.format_binary, order):
-            if command:
-                self.tell("format", command)
+        if command := self.says.format_text if text else self.says.format_binary:
+            self.tell("format", command)
+        self.byte_order(self.profile.data.byte_order)
+
+    def byte_order(self, order: str) -> None:
+        """Words "big" or "little" from now on, where the instrument wants to be told."""
+        if command := self.says.order_big if order == "big" else self.says.order_little:
+            self.tell("byte order", command)
 
     def catalog(self) -> list[str] | None:
         """Names of all traces, in capitals; None if the instrument cannot say."""

@@ -2,8 +2,9 @@
 
 1. clear errors; 2. identify, and match the profile; 3. outputs off, and confirmed off; 4. the
 profile's questions; 5. formats, proved by a short trace that is written as words and read as text;
-6. names and free memory; 7. for each trace: transfer, completion, errors to the end, read back and
-compare byte for byte; 8. outputs still off. A set is loaded whole or not at all.
+6. names and free memory; 7. for each trace: transfer, completion, errors to the end, read back in
+the other byte order and compare byte for byte; 8. outputs still off. A set is loaded whole or not
+at all.
 """
 
 from __future__ import annotations
@@ -232,11 +233,33 @@ def _one(
     instrument.define(trace.name, trace.points)
     instrument.store(trace.name, trace.data)
     instrument.require_no_error(f"transfer {trace.name}")
-    found = instrument.fetch(trace.name, len(trace.data), instrument.profile.memory.max_bytes)
-    if found != trace.data:
-        raise ReadBackError(f"{trace.name}: {_difference(trace.data, found)}")
+    _read_back(instrument, trace)
     record.line("read back equal", trace=trace.name, data_sha256=trace.data_sha256)
     record.trace(trace.name, "loaded")
+
+
+def _read_back(instrument: Instrument, trace: Trace) -> None:
+    """Read a trace and compare byte for byte: in the other byte order, where there is one.
+
+    An instrument that takes words in the wrong order answers them in the wrong order too; asked
+    for the other one, it cannot hide that.
+    """
+    profile, wanted = instrument.profile, trace.data
+    if instrument.both_orders:
+        instrument.byte_order("little" if profile.data.byte_order == "big" else "big")
+        wanted = np.frombuffer(trace.data, np.int16).byteswap().tobytes()
+    found = instrument.fetch(trace.name, len(trace.data), profile.memory.max_bytes)
+    if instrument.both_orders:
+        instrument.byte_order(profile.data.byte_order)
+    instrument.require_no_error(f"read back {trace.name}")
+    if found == wanted:
+        return
+    if found == trace.data:
+        raise ReadBackError(
+            f"{trace.name}: expected the words in the other byte order when asked for it, got them "
+            "in the same; leave the order that the instrument lacks empty in the profile's commands"
+        )
+    raise ReadBackError(f"{trace.name}: {_difference(wanted, found)}")
 
 
 def _difference(written: bytes, found: bytes | bytearray) -> str:

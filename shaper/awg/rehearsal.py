@@ -34,6 +34,7 @@ class RehearsalLink:
         self.messages: list[Message] = []
         self._traces: dict[str, bytes] = {}
         self._text = False  # whether data are answered as text
+        self._order = profile.data.byte_order
         self._answer = ""
         self._block = b""
 
@@ -67,6 +68,8 @@ class RehearsalLink:
             **{check.ask: str(check.expect) for check in profile.check},
             **{says.output_state.format(output=n): "0" for n in profile.outputs.numbers},
         }
+        if text in (says.order_big, says.order_little):
+            self._order = "big" if text == says.order_big else "little"
         if text in (says.format_text, says.format_binary):
             self._text = text == says.format_text
         self._answer = known.get(text, "")
@@ -75,7 +78,7 @@ class RehearsalLink:
             if text == says.data_query.format(name=name):
                 words = block.from_bytes(data, profile.data.byte_order)
                 self._answer = ",".join(map(str, words.tolist())) if self._text else ""
-                self._block = data
+                self._block = block.to_bytes(words, self._order)
 
     def _names(self) -> list[str]:
         """Names of the traces so far, from the messages that stored them."""
