@@ -5,7 +5,10 @@ import socket
 import threading
 
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
+from shaper.awg import block
 from shaper.awg.link import LinkError, SocketLink, open_link, split_address
 from shaper.errors import InputError
 
@@ -185,4 +188,47 @@ def test_no_delay():
     with peer(until_closed) as address:
         link = SocketLink(address, LONG)
         assert link._socket.getsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY)
+        link.close()
+
+
+ANSWERS = st.one_of(
+    st.binary(max_size=300).map(lambda data: ("block", data)),
+    st.text(st.characters(min_codepoint=32, max_codepoint=126), max_size=60).map(
+        lambda text: ("line", text)
+    ),
+)
+
+
+@settings(max_examples=60, deadline=None)
+@given(st.lists(ANSWERS, max_size=8), st.data())
+def test_any_answers_in_any_pieces(answers, data):
+    """However the wire cuts them, lines and blocks come out whole and in order."""
+    stream = b"".join(
+        (block.encode(value) if kind == "block" else value.encode()) + b"\n"
+        for kind, value in answers
+    )
+    cuts = sorted(data.draw(st.lists(st.integers(0, len(stream)), max_size=12)))
+    pieces = [stream[a:b] for a, b in zip([0, *cuts], [*cuts, len(stream)], strict=True)]
+    with peer(saying(*pieces)) as address:
+        link = SocketLink(address, LONG)
+        for kind, value in answers:
+            found = link.read_block(LONG, 300) if kind == "block" else link.read_line(LONG)
+            assert (bytes(found) if kind == "block" else found) == value
+        link.idle()
+        link.close()
+
+
+@settings(max_examples=60, deadline=None)
+@given(st.binary(max_size=400), st.booleans())
+def test_any_bytes_are_an_answer_or_a_clear_error(stream, as_block):
+    with peer(lambda link: link.sendall(stream)) as address:
+        link = SocketLink(address, LONG)
+        try:
+            found = link.read_block(LONG, 300) if as_block else link.read_line(LONG)
+        except LinkError as error:
+            assert str(error).isprintable() and len(str(error)) < 500
+        else:
+            whole = block.encode(found) if as_block else found.encode()
+            assert as_block or stream.startswith((whole + b"\n", whole + b"\r\n"))
+            assert bytes(found) in stream if as_block else True
         link.close()
