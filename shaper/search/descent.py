@@ -9,17 +9,17 @@ scored.
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 
+import jax
 import numpy as np
 
-from shaper.bench import error_grid, score_grid
-from shaper.drive.bound import quadratures
 from shaper.job import Job
 from shaper.search import gauss_newton, quasi_newton
+from shaper.search.checkpoint import Checkpoint
 from shaper.search.compiler import prepare
-from shaper.search.objective import Problem, all_infidelities, make_problem
+from shaper.search.objective import Problem, all_infidelities, drive_of, make_problem
 from shaper.search.starts import starting_parameters
 
 STATUSES = {
@@ -104,13 +104,18 @@ def method_for(problem: Problem, starts: int):
     Measured on robust z rotations: a Gauss-Newton step leads as far as some hundred quasi-Newton
     steps and costs as much as ten, as long as there are a few hundred error components.
     """
-    size = problem.residuals * 2 * problem.slices * starts
+    size = problem.equations * 2 * problem.slices * starts
     return gauss_newton if size <= LARGEST_JACOBIAN else quasi_newton
+
+
+def worst_counts(job: Job) -> bool:
+    """Whether a pulse is judged by its worst point over the box, and not by the mean."""
+    return job.minimize != "mean" or job.stop_infidelity is not None
 
 
 def stages(job: Job) -> tuple[Stage, ...]:
     """The legs of this job's search."""
-    if not job.has_tolerance:
+    if not job.has_tolerance or job.minimize == "first_order":
         return (EXPLORE,)
     if job.minimize == "mean":
         return (EXPLORE, replace(REFINE, powers=(1.0,)))
@@ -121,6 +126,10 @@ def search(
     job: Job,
     progress: Progress | None = None,
     stop: Callable[[], bool] | None = None,
+    *,
+    checkpoint: Checkpoint | None = None,
+    warm: Sequence[np.ndarray] = (),
+    slices: int | None = None,
 ) -> Found:
     """The best waveform found for the job.
 
@@ -128,78 +137,108 @@ def search(
         job: what to make.
         progress: called between chunks of steps.
         stop: asked between chunks; True ends the search with what is best so far.
+        checkpoint: where the search is kept from time to time, and taken up again.
+        warm: drives [slice, 2] in W_max, of any number of slices, to start from as well; they
+            take the places of the last random starts.
+        slices: length of the arrays, see ``make_problem``.
     Returns:
         the winner and what became of every start. The same job gives the same result, bit for
-        bit, on the same machine and library versions.
+        bit, on the same machine and library versions, resumed or not.
     """
     prepare()
-    parameters, names = starting_parameters(job)
-    run = _Run(job, parameters, progress or (lambda *_: None), stop or (lambda: False))
-    chosen = np.arange(len(names))
-    for stage in stages(job):
-        chosen = chosen[: stage.kept]
-        chosen = run.leg(stage, chosen)
-        if run.interrupted or run.reached:
-            break
-    return run.found(names)
+    parameters, names = starting_parameters(job, warm)
+    padding = (slices or job.slices) - job.slices
+    run = _Run(job, np.pad(parameters, ((0, 0), (0, padding), (0, 0))), names)
+    if checkpoint is not None:
+        run.restore(checkpoint.load())
+    progress, stop = progress or (lambda *_: None), stop or (lambda: False)
+    while not run.ended:
+        run.advance()
+        progress(*run.report())
+        run.interrupted = run.interrupted or stop()
+        if checkpoint is not None and (run.interrupted or checkpoint.due):
+            checkpoint.save(run.snapshot())
+    return run.found()
 
 
 class _Run:
-    """One search under way: where the starts stand, what was best, and why it should end."""
+    """One search under way: where the starts stand, what was best, and how far it has come.
 
-    def __init__(self, job: Job, parameters: np.ndarray, progress: Progress, stop):
-        self.job, self.progress, self.stop = job, progress, stop
+    All that ``advance`` changes is in ``snapshot``.
+    """
+
+    def __init__(self, job: Job, parameters: np.ndarray, names: list[str]):
+        self.job, self.names, self.stages = job, names, stages(job)
         self.parameters = parameters
-        self.status = np.full(len(parameters), "step_limit", dtype=object)
+        self.status = np.full(len(names), "step_limit", dtype="U12")
+        self.best_score, self.best_start, self.best = np.inf, 0, parameters[0]
+        self.legs: list[Leg] = []
         self.interrupted = self.reached = False
-        self.history: dict[str, Leg] = {}
-        self.best = (np.inf, 0, parameters[0])  # score, start, parameters
-        self._score_problem = make_problem(job, score_grid(job))
-
-    def leg(self, stage: Stage, chosen: np.ndarray) -> np.ndarray:
-        """One stage for the chosen starts; returns them, the best first."""
-        problem = make_problem(self.job, error_grid(self.job, *stage.points))
-        method = method_for(problem, len(chosen))
-        steps = stage.steps or self.job.iterations
-        costs, done = [], 0
-        for power in stage.powers:
-            state = method.begin(problem, self.parameters[chosen], power)
-            if not costs:
-                costs.append(np.asarray(state.cost)[None])
-                self._look(stage, 0, steps * len(stage.powers), chosen, state)
-            idle, end = np.zeros(len(chosen), dtype=int), done + steps
-            while done < end and not (self.interrupted or self.reached):
-                state, cost = method.advance(problem, state, power, min(CHUNK, steps))
-                gain = np.asarray(state.cost) - costs[-1][-1]
-                costs.append(np.asarray(cost))
-                idle = np.where(-gain < STALL_GAIN, idle + 1, 0)
-                done += len(cost)
-                self._look(stage, done, steps * len(stage.powers), chosen, state)
-                if np.all(idle >= STALL_CHUNKS):
-                    break
-            self.parameters[chosen] = np.asarray(state.parameters)
-            stalled, lost = idle >= STALL_CHUNKS, ~np.isfinite(np.asarray(state.cost))
-            self.status[chosen] = np.where(stalled, "stalled", "step_limit")
-            self.status[chosen[lost]] = "nonfinite"
-            order = np.argsort(self._remember(chosen, power))  # nan last
-        self.history[stage.name] = Leg(chosen, np.exp(np.concatenate(costs)).T)
-        return chosen[order]
-
-    def _look(self, stage: Stage, done: int, total: int, chosen: np.ndarray, state) -> None:
-        """Progress, interruption, and whether the goal is reached on the score's grid too."""
-        found = np.asarray(state.worst if self._worst_counts else np.exp(state.cost))
-        leader = int(np.nanargmin(found)) if np.any(np.isfinite(found)) else 0
-        self.progress(stage.name, done, total, float(found[leader]))
-        self.interrupted = self.interrupted or self.stop()
-        goal = self.job.stop_infidelity
-        if goal is not None and found[leader] <= goal:
-            self.parameters[chosen] = np.asarray(state.parameters)
-            self._remember(chosen[leader : leader + 1], power=1.0)
-            self.reached = self.best[0] <= goal
+        self._score_problem = make_problem(job, slices=parameters.shape[1])
+        self._enter(0, np.arange(len(names)))
 
     @property
-    def _worst_counts(self) -> bool:
-        return self.job.minimize == "worst" or self.job.stop_infidelity is not None
+    def ended(self) -> bool:
+        """Whether there is nothing more to do."""
+        return self.interrupted or self.reached or self.stage_number >= len(self.stages)
+
+    def _enter(self, number: int, chosen: np.ndarray) -> None:
+        """Begin a stage with the best of the chosen starts."""
+        self.stage_number, self.power_number = number, 0
+        if number < len(self.stages):
+            stage = self.stages[number]
+            self.chosen = chosen[: stage.kept]
+            self.costs: list[np.ndarray] = []
+            self._make_problem()
+            self._begin_power()
+
+    def _make_problem(self) -> None:
+        points = self.stages[self.stage_number].points
+        self.problem = make_problem(self.job, points, self.parameters.shape[1])
+        self.method = method_for(self.problem, len(self.chosen))
+
+    def _begin_power(self) -> None:
+        self.state = self.method.begin(self.problem, self.parameters[self.chosen])
+        self.done, self.idle = 0, np.zeros(len(self.chosen), dtype=int)
+
+    def advance(self) -> None:
+        """One chunk of steps, and whatever follows from it."""
+        stage = self.stages[self.stage_number]
+        steps = stage.steps or self.job.iterations
+        power = stage.powers[self.power_number]
+        chunk = min(CHUNK, steps - self.done)
+        self.state, costs = self.method.advance(self.problem, self.state, power, chunk)
+        costs = np.asarray(costs)
+        gain = costs[0] - costs[-1]
+        self.idle = np.where(gain < STALL_GAIN, self.idle + 1, 0)
+        self.costs.append(costs[1:] if self.costs else costs)
+        self.done += chunk
+        self._look_for_goal()
+        if self.reached or self.done >= steps or np.all(self.idle >= STALL_CHUNKS):
+            self._end_power(stage, power)
+
+    def _end_power(self, stage: Stage, power: float) -> None:
+        self.parameters[self.chosen] = np.asarray(self.state.parameters)
+        self.status[self.chosen] = np.where(self.idle >= STALL_CHUNKS, "stalled", "step_limit")
+        self.status[self.chosen[~np.isfinite(np.asarray(self.state.cost))]] = "nonfinite"
+        order = np.argsort(self._remember(self.chosen, power))  # nan last
+        self.power_number += 1
+        if self.power_number < len(stage.powers) and not self.reached:
+            self._begin_power()
+            return
+        self.legs.append(Leg(self.chosen, np.exp(np.concatenate(self.costs)).T))
+        self._enter(self.stage_number + 1, self.chosen[order])
+
+    def _look_for_goal(self) -> None:
+        """Whether the leader meets the goal, on the score's grid too."""
+        goal = self.job.stop_infidelity
+        found = np.asarray(self.state.worst)
+        if goal is None or not np.any(found <= goal):
+            return
+        leader = int(np.nanargmin(found))
+        self.parameters[self.chosen] = np.asarray(self.state.parameters)
+        self._remember(self.chosen[leader : leader + 1], power=1.0)
+        self.reached = self.best_score <= goal
 
     def _remember(self, starts: np.ndarray, power: float) -> np.ndarray:
         """Score these starts as they stand, and keep the best ever seen.
@@ -216,21 +255,90 @@ class _Run:
             ]
         )[: len(starts)]
         mean = found @ np.asarray(self._score_problem.weight)
-        score = found.max(axis=1) if self._worst_counts else mean
+        score = found.max(axis=1) if worst_counts(self.job) else mean
         leader = int(np.argmin(np.where(np.isfinite(score), score, np.inf)))
-        if score[leader] < self.best[0]:
+        if score[leader] < self.best_score:
             start = int(starts[leader])
-            self.best = (float(score[leader]), start, self.parameters[start].copy())
+            self.best_score, self.best_start = float(score[leader]), start
+            self.best = self.parameters[start].copy()
         return mean if power == 1 else score
 
-    def found(self, names: list[str]) -> Found:
+    def report(self) -> tuple[str, int, int, float]:
+        """For the progress line: stage, step, of how many, best infidelity so far."""
+        number = min(self.stage_number, len(self.stages) - 1)
+        stage = self.stages[number]
+        steps = stage.steps or self.job.iterations
+        here = np.asarray(self.state.worst)
+        best = min(self.best_score, np.nanmin(here) if np.any(np.isfinite(here)) else np.inf)
+        done = self.power_number * steps + self.done
+        return stage.name, done, steps * len(stage.powers), float(best)
+
+    def found(self) -> Found:
         """The best ever seen, and what became of every start."""
-        score, start, parameters = self.best
+        if self.interrupted and self.stage_number < len(self.stages):
+            self.parameters[self.chosen] = np.asarray(self.state.parameters)
+            self._remember(self.chosen, power=1.0)
+            if self.costs:
+                self.legs.append(Leg(self.chosen, np.exp(np.concatenate(self.costs)).T))
         goal = self.job.stop_infidelity
-        if goal is not None and score <= goal:
-            self.status[start] = "converged"
+        if goal is not None and self.best_score <= goal:
+            self.status[self.best_start] = "converged"
         elif self.interrupted:
-            self.status[start] = "interrupted"
-        drive = np.asarray(quadratures(parameters, self.job.bound)) * self.job.rabi_max
+            self.status[self.best_start] = "interrupted"
+        drive = np.asarray(drive_of(self._score_problem, self.best))[: self.job.slices]
         statuses = [str(s) for s in self.status]
-        return Found(drive, score, statuses[start], names, statuses, start, self.history)
+        legs = {stage.name: leg for stage, leg in zip(self.stages, self.legs, strict=False)}
+        return Found(
+            drive * self.job.rabi_max,
+            self.best_score,
+            statuses[self.best_start],
+            self.names,
+            statuses,
+            self.best_start,
+            legs,
+        )
+
+    def snapshot(self) -> dict[str, np.ndarray]:
+        """Everything needed to go on from here, as arrays."""
+        kept = {name: np.asarray(getattr(self, name)) for name in _KEPT}
+        if self.stage_number < len(self.stages):
+            kept |= {name: np.asarray(getattr(self, name)) for name in ("chosen", "idle", "done")}
+            leaves = jax.tree_util.tree_leaves(self.state)
+            kept |= {f"state_{k}": np.asarray(leaf) for k, leaf in enumerate(leaves)}
+            if self.costs:
+                kept["costs"] = np.concatenate(self.costs)
+        for k, leg in enumerate(self.legs):
+            kept |= {f"leg_{k}_starts": leg.starts, f"leg_{k}_infidelity": leg.infidelity}
+        return kept
+
+    def restore(self, kept: dict[str, np.ndarray] | None) -> None:
+        """Go on from a snapshot; None: from the beginning."""
+        if kept is None:
+            return
+        for name in _KEPT:
+            value = kept[name]
+            setattr(self, name, value.copy() if value.ndim else value.item())
+        self.legs = [
+            Leg(kept[f"leg_{k}_starts"], kept[f"leg_{k}_infidelity"])
+            for k in range(sum(name.endswith("_starts") for name in kept))
+        ]
+        if self.stage_number < len(self.stages):
+            self.chosen, self.idle, self.done = kept["chosen"], kept["idle"], int(kept["done"])
+            self._make_problem()
+            fresh = self.method.begin(self.problem, self.parameters[self.chosen])
+            leaves, tree = jax.tree_util.tree_flatten(fresh)
+            leaves = [kept[f"state_{k}"] for k in range(len(leaves))]
+            self.state = jax.tree_util.tree_unflatten(tree, leaves)
+            self.costs = [kept["costs"]] if "costs" in kept else []
+
+
+_KEPT = (
+    "stage_number",
+    "power_number",
+    "parameters",
+    "status",
+    "best_score",
+    "best_start",
+    "best",
+    "reached",
+)

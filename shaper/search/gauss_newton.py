@@ -28,10 +28,10 @@ from typing import NamedTuple
 
 import jax
 import jax.numpy as jnp
+import numpy as np
 
-from shaper.drive.bound import quadratures
 from shaper.physics import two_level
-from shaper.search.objective import Problem, infidelities, log_power_mean, rotation_errors
+from shaper.search.objective import Problem, at_qubit, drive_of, measure, rotation_errors
 
 Array = jax.Array
 
@@ -49,7 +49,7 @@ class State(NamedTuple):
     Attributes:
         parameters: [start, slice, 2] rad.
         damping: [start] unitless.
-        cost: [start] logarithm of the power mean.
+        cost: [start] logarithm of the power mean, wishes added.
         worst: [start] largest infidelity on the grid.
     """
 
@@ -59,17 +59,11 @@ class State(NamedTuple):
     worst: Array
 
 
-def _measure(problem: Problem, parameters: Array, power: Array) -> tuple[Array, Array]:
-    found = infidelities(problem, parameters)
-    return log_power_mean(found, problem.weight, power), jnp.max(found)
-
-
-@jax.jit
-def begin(problem: Problem, parameters: Array, power: Array) -> State:
-    """The state before the first step; parameters [start, slice, 2] rad."""
-    cost, worst = jax.vmap(lambda p: _measure(problem, p, power))(parameters)
-    damping = jnp.full(parameters.shape[0], FIRST_DAMPING)
-    return State(parameters, damping, cost, worst)
+def begin(problem: Problem, parameters: np.ndarray) -> State:
+    """The state before the first step; parameters [start, slice, 2] rad. Nothing is computed."""
+    starts = len(parameters)
+    unknown = np.full(starts, np.nan)
+    return State(parameters, np.full(starts, FIRST_DAMPING), unknown, unknown)
 
 
 def _lean(problem: Problem, errors: Array, power: Array):
@@ -93,20 +87,37 @@ def _lean(problem: Problem, errors: Array, power: Array):
 
 
 def _jacobian(problem: Problem, parameters: Array) -> tuple[Array, Array]:
-    """Errors [row, grid] and their derivative [row, grid, parameter]."""
-    drive, pull_back = jax.vjp(lambda p: quadratures(p, problem.bound), parameters)
-    errors, jacobian = two_level.errors_and_jacobian(
-        drive,
-        problem.durations,
-        problem.eps,
-        problem.delta,
-        problem.rows,
-        problem.longest_turn,
+    """Errors [row, point] and their derivative [row, point, parameter]."""
+    (drive, durations), pull_back = jax.vjp(
+        lambda p: at_qubit(problem, drive_of(problem, p)), parameters
     )
-    # one cotangent of the drive per error component: [residual, slice, 2]
-    jacobian = jnp.moveaxis(jacobian.reshape(problem.slices, 2, -1), -1, 0)
-    jacobian = jax.vmap(lambda g: pull_back(g)[0])(jacobian)
+    errors, jacobian = two_level.errors_and_jacobian(
+        drive, durations, problem.eps, problem.delta, problem.rows, problem.longest_turn
+    )
+    if problem.mix is not None:
+        errors, jacobian = errors @ problem.mix.T, jacobian @ problem.mix.T
+    # one cotangent of the drive per error component: [residual, cell, 2]
+    jacobian = jnp.moveaxis(jacobian.reshape(len(durations), 2, -1), -1, 0)
+    still = jnp.zeros_like(durations)
+    jacobian = jax.vmap(lambda g: pull_back((g, still))[0])(jacobian)
     return errors, jacobian.reshape(*errors.shape, -1)
+
+
+def _wish_equations(problem: Problem, parameters: Array, size: Array) -> tuple[Array, Array]:
+    """The wishes in least-squares form, beside errors of mean square ``size``.
+
+    Returns:
+        jacobian [equation, parameter] and residual [equation].
+    """
+    drive, pull_back = jax.vjp(lambda p: drive_of(problem, p), parameters)
+    matrix = jnp.concatenate([jnp.sqrt(w * size) * m for m, w in problem.wishes.values()])
+    blocks = [  # the same equations for x and for y
+        jnp.stack([matrix, none], axis=-1)[..., order]
+        for none in [jnp.zeros_like(matrix)]
+        for order in ([0, 1], [1, 0])
+    ]
+    jacobian = jax.vmap(lambda g: pull_back(g)[0])(jnp.concatenate(blocks))
+    return jacobian.reshape(len(jacobian), -1), (matrix @ drive).T.ravel()
 
 
 def _damped_solver(jacobian: Array, damping: Array):
@@ -123,12 +134,19 @@ def _accelerated_step(problem: Problem, power: Array, parameters: Array, damping
     """The damped Gauss-Newton step with its bend, [slice, 2] rad."""
     errors, jacobian = _jacobian(problem, parameters)
     lean, residual = _lean(problem, errors, power)
-    jacobian = lean(jacobian).reshape(errors.size, -1)
+    jacobian, residual = lean(jacobian).reshape(errors.size, -1), residual.ravel()
+    if problem.wishes:
+        size = (2 * power - 1) * jnp.sum(residual**2)
+        wish_jacobian, wish_residual = _wish_equations(problem, parameters, size)
+        jacobian = jnp.concatenate([jacobian, wish_jacobian])
+        residual = jnp.concatenate([residual, wish_residual])
     solve = _damped_solver(jacobian, damping)
-    step = solve(residual.ravel())
+    step = solve(residual)
     ahead = rotation_errors(problem, parameters + _AHEAD * step.reshape(parameters.shape))
     change = lean(ahead - errors).ravel() / _AHEAD
-    bend = 0.5 * solve(2 / _AHEAD * (change - jacobian @ step))
+    curvature = 2 / _AHEAD * (change - jacobian[: errors.size] @ step)
+    curvature = jnp.pad(curvature, (0, len(residual) - errors.size))  # wishes are nearly linear
+    bend = 0.5 * solve(curvature)
     most = _MOST_BEND * jnp.linalg.norm(step)
     bend = bend * jnp.minimum(1.0, most / (jnp.linalg.norm(bend) + _TINY))
     return (step + bend).reshape(parameters.shape)
@@ -137,7 +155,7 @@ def _accelerated_step(problem: Problem, power: Array, parameters: Array, damping
 def _step(problem: Problem, power: Array, state: State) -> State:
     """One step of one start: taken if the cost falls, else the damping rises."""
     trial = state.parameters + _accelerated_step(problem, power, state.parameters, state.damping)
-    cost, worst = _measure(problem, trial, power)
+    cost, worst = measure(problem, power, trial)
     better = cost < state.cost  # false for nan
     pick = partial(jnp.where, better)
     damping = jnp.clip(state.damping * pick(_EASE, _TIGHTEN), *_DAMPING_RANGE)
@@ -152,16 +170,19 @@ def advance(problem: Problem, state: State, power: Array, steps: int) -> tuple[S
 
     Args:
         problem: the job on its grid.
-        state: where the starts stand, for the same power.
+        state: where the starts stand.
         power: [] of the mean, >= 1.
         steps: how many.
     Returns:
-        the new state, and the cost after each step, [step, start].
+        the new state, and the cost before and after each step, [1 + step, start].
     """
+    cost, worst = jax.vmap(partial(measure, problem, power))(state.parameters)
+    state = state._replace(cost=cost, worst=worst)
     every = jax.vmap(partial(_step, problem, power))
 
     def body(state, _):
         state = every(state)
         return state, state.cost
 
-    return jax.lax.scan(body, state, None, length=steps)
+    state, costs = jax.lax.scan(body, state, None, length=steps)
+    return state, jnp.concatenate([cost[None], costs])

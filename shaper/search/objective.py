@@ -3,6 +3,7 @@
 The rotation errors ``r = E q`` of a grid point are scaled so that its infidelity is ``|r|^2``. The
 mean over the box is the power mean with ``power = 1``; larger powers lean towards the worst point,
 and in the limit are the maximum. The logarithm is minimized, so that 1e-4 and 1e-12 weigh alike.
+Wishes for the look of the waveform are added to it, each a weight times a sum of squares.
 
 Everything here is in units of ``W_max``: drive in W_max, time in 1/W_max, detuning in W_max.
 """
@@ -15,14 +16,17 @@ import jax
 import jax.numpy as jnp
 import numpy as np
 
-from shaper.bench import Grid
+from shaper.bench import Grid, error_grid, line_taps, score_grid
 from shaper.drive.bound import quadratures
+from shaper.drive.line import filtered
 from shaper.job import Job
 from shaper.physics import two_level
+from shaper.search import shape
 
 Array = jax.Array
 
 _TINY = 1e-300  # keeps the logarithm of a perfect pulse finite
+_SLOPE_REACH = 1e-3  # rad; how far the ends of a central difference lie from the center
 
 
 @jax.tree_util.register_dataclass
@@ -31,11 +35,16 @@ class Problem:
     """One job's numbers, ready for the compiler.
 
     Attributes:
-        durations: [slice] 1/W_max.
+        durations: [slice] 1/W_max; slices of no duration are not there.
         eps: [grid] unitless.
         delta: [grid] W_max.
-        weight: [grid] unitless, sums to 1.
+        weight: [point] unitless, sums to 1.
         rows: [row, 4, grid] unitless; the infidelity of a point is ``|rows q|^2``.
+        envelope: [slice] unitless, in [0, 1]; the drive is held below it. None: no envelope.
+        kernel: [tap, cell] complex, of the line (``drive.line.Taps``); None: no line.
+        mix: [point, grid] unitless. What is minimized are these combinations of the grid's
+            errors, for slopes by differences. None: the grid points themselves.
+        wishes: name to (matrix [equation, slice], weight): costs ``weight |matrix drive|^2``.
         bound: "circle" or "box".
         longest_turn: rad; no slice turns further.
     """
@@ -45,6 +54,10 @@ class Problem:
     delta: Array
     weight: Array
     rows: Array
+    envelope: Array | None
+    kernel: Array | None
+    mix: Array | None
+    wishes: dict[str, tuple[Array, Array]]
     bound: str = field(metadata={"static": True})
     longest_turn: float = field(metadata={"static": True})
 
@@ -54,27 +67,99 @@ class Problem:
         return self.durations.shape[0]
 
     @property
-    def residuals(self) -> int:
-        """Number of rotation errors, all grid points together."""
-        return self.rows.shape[0] * self.rows.shape[2]
+    def equations(self) -> int:
+        """Number of squares in the sum."""
+        wishes = sum(2 * matrix.shape[0] for matrix, _ in self.wishes.values())
+        return self.rows.shape[0] * self.weight.shape[0] + wishes
 
 
-def make_problem(job: Job, grid: Grid) -> Problem:
-    """The job on a grid of errors."""
-    target = job.target
-    rows = np.sqrt(target.scale) * target.error_rows[:, :, None] * np.ones(len(grid.eps))
-    rate = (1 + np.max(np.abs(grid.eps))) * (1.0 if job.bound == "circle" else np.sqrt(2))
-    reach = np.hypot(rate, np.max(np.abs(grid.delta)) / job.rabi_max)
+def make_problem(
+    job: Job, points: tuple[int, int] | None = None, slices: int | None = None
+) -> Problem:
+    """The job on a grid of errors, all its qubits together.
+
+    Args:
+        points: of the Gauss-Lobatto grid along amplitude and detuning; None: the grid on which
+            pulses are scored, without the qubits' weights and without wishes.
+        slices: length of the arrays, at least the job's own; the rest has no duration.
+    """
+    scored = points is None
+    if job.minimize == "first_order":
+        parts = [_slopes(job, group) for group in job.groups]
+    else:
+        parts = [_box(job, group, points) for group in job.groups]
+    grids, mixes = zip(*parts, strict=True)
+    rows = [
+        _rows(group, len(grid.eps), 1.0 if scored else group.weight)
+        for group, grid in zip(job.groups, grids, strict=True)
+    ]
+    delta = np.concatenate([grid.delta for grid in grids]) / job.rabi_max
+    eps = np.concatenate([grid.eps for grid in grids])
     step = job.slice_duration * job.rabi_max
+    rate = (1 + np.max(np.abs(eps))) * (1.0 if job.bound == "circle" else np.sqrt(2))
+    durations = np.zeros(slices or job.slices)
+    durations[: job.slices] = step
+    taps = line_taps(job)
     return Problem(
-        durations=np.full(job.slices, step),
-        eps=grid.eps,
-        delta=grid.delta / job.rabi_max,
-        weight=grid.weight,
-        rows=rows,
+        durations=durations,
+        eps=eps,
+        delta=delta,
+        weight=np.concatenate([grid.weight for grid in grids]) / len(grids),
+        rows=np.concatenate(rows, axis=2),
+        envelope=shape.envelope(job, len(durations)),
+        kernel=None if taps is None else taps.kernel,
+        mix=_block_diagonal(mixes) if job.minimize == "first_order" else None,
+        wishes={} if scored else shape.wishes(job, len(durations)),
         bound=job.bound,
-        longest_turn=_rounded_up(float(reach * step)),
+        longest_turn=_rounded_up(float(np.hypot(rate, np.max(np.abs(delta))) * step)),
     )
+
+
+def _box(job: Job, group, points) -> tuple[Grid, None]:
+    alone = job.for_group(group)
+    return (score_grid(alone) if points is None else error_grid(alone, *points)), None
+
+
+def _slopes(job: Job, group) -> tuple[Grid, np.ndarray]:
+    """Center and arms of a small cross, and the differences that give errors and slopes.
+
+    A slope is taken times the tolerance: what it would add at the edge of the box. The central
+    difference is off by the third derivative times 1e-6/6 of its reach squared.
+    """
+    turn = job.rabi_max * job.duration
+    eps = _SLOPE_REACH / turn if group.amplitude_tolerance else 0.0
+    delta = _SLOPE_REACH / job.duration if group.detuning_tolerance else 0.0
+    grid = Grid(
+        np.array([0.0, eps, -eps, 0.0, 0.0]),
+        np.array([0.0, 0.0, 0.0, delta, -delta]) + group.detuning,
+        np.full(3, 1 / 3),
+    )
+    along_eps = group.amplitude_tolerance / (2 * eps) if eps else 0.0
+    along_delta = group.detuning_tolerance / (2 * delta) if delta else 0.0
+    mix = np.array(
+        [
+            [1.0, 0.0, 0.0, 0.0, 0.0],
+            [0.0, along_eps, -along_eps, 0.0, 0.0],
+            [0.0, 0.0, 0.0, along_delta, -along_delta],
+        ]
+    )
+    return grid, mix
+
+
+def _rows(group, points: int, weight: float) -> np.ndarray:
+    """[3, 4, point]: error rows of a qubit; a third row of zeros where an axis is free."""
+    rows = np.zeros((3, 4))
+    rows[: len(group.target.error_rows)] = group.target.error_rows
+    return np.sqrt(weight * group.target.scale) * rows[:, :, None] * np.ones(points)
+
+
+def _block_diagonal(blocks) -> np.ndarray:
+    total = np.zeros(np.sum([block.shape for block in blocks], axis=0))
+    row = column = 0
+    for block in blocks:
+        total[row : row + block.shape[0], column : column + block.shape[1]] = block
+        row, column = row + block.shape[0], column + block.shape[1]
+    return total
 
 
 def _rounded_up(turn: float) -> float:
@@ -82,35 +167,66 @@ def _rounded_up(turn: float) -> float:
     return float(2 ** (np.ceil(4 * np.log2(turn)) / 4))
 
 
-def rotation_errors(problem: Problem, parameters: Array) -> Array:
-    """[row, grid] unitless: ``rows q`` at each grid point; parameters [slice, 2] rad."""
+def drive_of(problem: Problem, parameters: Array) -> Array:
+    """[slice, 2] W_max: what the DAC plays; parameters [slice, 2] rad."""
     drive = quadratures(parameters, problem.bound)
-    q = two_level.propagate(
-        drive, problem.durations, problem.eps, problem.delta, problem.longest_turn
-    )
-    return sum(problem.rows[:, i] * q[i] for i in range(4))
+    return drive if problem.envelope is None else drive * problem.envelope[:, None]
+
+
+def at_qubit(problem: Problem, drive: Array) -> tuple[Array, Array]:
+    """What arrives at the qubit of a drive: [cell, 2] W_max and [cell] 1/W_max."""
+    if problem.kernel is None:
+        return drive, problem.durations
+    taps, cells = problem.kernel.shape
+    longer = problem.slices + taps - 1
+    step = problem.durations[0] / cells
+    return filtered(problem.kernel, drive), jnp.full(longer * cells, step)
+
+
+def rotation_errors(problem: Problem, parameters: Array) -> Array:
+    """[row, point] unitless: what should vanish; parameters [slice, 2] rad."""
+    drive, durations = at_qubit(problem, drive_of(problem, parameters))
+    q = two_level.propagate(drive, durations, problem.eps, problem.delta, problem.longest_turn)
+    errors = sum(problem.rows[:, i] * q[i] for i in range(4))
+    return errors if problem.mix is None else errors @ problem.mix.T
 
 
 def infidelities(problem: Problem, parameters: Array) -> Array:
-    """[grid] unitless: the infidelity at each grid point; parameters [slice, 2] rad."""
+    """[point] unitless: the infidelity at each grid point; parameters [slice, 2] rad."""
     return jnp.sum(rotation_errors(problem, parameters) ** 2, axis=0)
 
 
 @jax.jit
 def all_infidelities(problem: Problem, parameters: Array) -> Array:
-    """[start, grid] unitless, for parameters [start, slice, 2] rad; one compiled program."""
+    """[start, point] unitless, for parameters [start, slice, 2] rad; one compiled program."""
     return jax.vmap(infidelities, (None, 0))(problem, parameters)
+
+
+def wish_costs(problem: Problem, parameters: Array) -> dict[str, Array]:
+    """Each wish's cost, weight included; parameters [slice, 2] rad."""
+    drive = drive_of(problem, parameters)
+    return {
+        name: weight * jnp.sum((matrix @ drive) ** 2)
+        for name, (matrix, weight) in problem.wishes.items()
+    }
 
 
 def log_power_mean(infidelity: Array, weight: Array, power: Array | float) -> Array:
     """Logarithm of ``(sum weight infidelity^power)^(1/power)``, without under- or overflow.
 
     Args:
-        infidelity: [grid] unitless, >= 0.
-        weight: [grid] unitless.
+        infidelity: [point] unitless, >= 0.
+        weight: [point] unitless.
         power: [] at least 1.
     Returns:
         [] unitless; between the log of the mean and the log of the maximum.
     """
     top = jnp.max(infidelity) + _TINY
     return jnp.log(top) + jnp.log(jnp.sum(weight * (infidelity / top) ** power)) / power
+
+
+def measure(problem: Problem, power: Array, parameters: Array) -> tuple[Array, Array]:
+    """The cost (log power mean plus wishes) and the largest infidelity on the grid."""
+    found = infidelities(problem, parameters)
+    wishes = sum(wish_costs(problem, parameters).values(), jnp.zeros(()))
+    return log_power_mean(found, problem.weight, power) + wishes, jnp.max(found)

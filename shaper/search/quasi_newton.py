@@ -14,9 +14,10 @@ from typing import NamedTuple
 
 import jax
 import jax.numpy as jnp
+import numpy as np
 import optax
 
-from shaper.search.objective import Problem, infidelities, log_power_mean
+from shaper.search.objective import Problem, measure
 
 Array = jax.Array
 
@@ -30,7 +31,7 @@ class State(NamedTuple):
     Attributes:
         parameters: [start, slice, 2] rad.
         memory: of the optimizer, every leaf with a leading start axis.
-        cost: [start] logarithm of the power mean.
+        cost: [start] logarithm of the power mean, wishes added.
         worst: [start] largest infidelity on the grid.
     """
 
@@ -45,30 +46,22 @@ def _optimizer() -> optax.GradientTransformationExtraArgs:
     return optax.lbfgs(memory_size=_MEMORY, linesearch=search)
 
 
-def _cost(problem: Problem, power: Array, parameters: Array) -> Array:
-    return log_power_mean(infidelities(problem, parameters), problem.weight, power)
-
-
-def _measure(problem: Problem, power: Array, parameters: Array) -> tuple[Array, Array]:
-    found = infidelities(problem, parameters)
-    return log_power_mean(found, problem.weight, power), jnp.max(found)
-
-
-@jax.jit
-def begin(problem: Problem, parameters: Array, power: Array) -> State:
+def begin(problem: Problem, parameters: np.ndarray) -> State:
     """The state before the first step; parameters [start, slice, 2] rad."""
     parameters = jnp.asarray(parameters)
-    cost, worst = jax.vmap(partial(_measure, problem, power))(parameters)
-    return State(parameters, jax.vmap(_optimizer().init)(parameters), cost, worst)
+    unknown = jnp.full(len(parameters), jnp.nan)
+    return State(parameters, jax.vmap(_optimizer().init)(parameters), unknown, unknown)
 
 
-def _step(problem: Problem, power: Array, state: State) -> State:
-    cost = partial(_cost, problem, power)
-    value, slope = optax.value_and_grad_from_state(cost)(state.parameters, state=state.memory)
+def _step(problem: Problem, power: Array, parameters: Array, memory: optax.OptState):
+    def cost(p: Array) -> Array:
+        return measure(problem, power, p)[0]
+
+    value, slope = optax.value_and_grad_from_state(cost)(parameters, state=memory)
     update, memory = _optimizer().update(
-        slope, state.memory, state.parameters, value=value, grad=slope, value_fn=cost
+        slope, memory, parameters, value=value, grad=slope, value_fn=cost
     )
-    return State(optax.apply_updates(state.parameters, update), memory, value, state.worst)
+    return optax.apply_updates(parameters, update), memory, value
 
 
 @partial(jax.jit, static_argnames="steps")
@@ -77,18 +70,18 @@ def advance(problem: Problem, state: State, power: Array, steps: int) -> tuple[S
 
     Args:
         problem: the job on its grid.
-        state: where the starts stand, for the same power.
+        state: where the starts stand; its memory must be of the same power.
         power: [] of the mean, >= 1.
         steps: how many.
     Returns:
-        the new state, and the cost before each step, [step, start].
+        the new state, and the cost before and after each step, [1 + step, start].
     """
     every = jax.vmap(partial(_step, problem, power))
 
-    def body(state, _):
-        state = every(state)
-        return state, state.cost
+    def body(carry, _):
+        parameters, memory, value = every(*carry)
+        return (parameters, memory), value
 
-    state, costs = jax.lax.scan(body, state, None, length=steps)
-    cost, worst = jax.vmap(partial(_measure, problem, power))(state.parameters)
-    return state._replace(cost=cost, worst=worst), costs
+    carry, costs = jax.lax.scan(body, (state.parameters, state.memory), None, length=steps)
+    cost, worst = jax.vmap(partial(measure, problem, power))(carry[0])
+    return State(*carry, cost, worst), jnp.concatenate([costs, cost[None]])

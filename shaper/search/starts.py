@@ -6,6 +6,8 @@ same strength would average to almost no drive at all.
 
 from __future__ import annotations
 
+from collections.abc import Collection
+
 import numpy as np
 
 from shaper.composite.box import shortest_box
@@ -21,12 +23,17 @@ _WANDER = 2.0  # rad, size of the phase's Fourier terms
 _CHIRP = 3.0  # rad, size of its even drift
 
 
-def starting_parameters(job: Job) -> tuple[np.ndarray, list[str]]:
+def starting_parameters(
+    job: Job, warm: Collection[np.ndarray] = ()
+) -> tuple[np.ndarray, list[str]]:
     """Parameters of every start, and the names of their origins.
 
-    The sandwich and the time-optimal pulse come first (as many as fit into ``job.starts``), then
-    smooth random ones from ``job.seed``; start k is the same whatever the number of starts.
+    The sandwich and the time-optimal pulse come first, then drives that are known already, then
+    smooth random ones from ``job.seed``, as many as make ``job.starts``; random start k is the same
+    whatever else there is.
 
+    Args:
+        warm: drives [slice, 2] in W_max, stretched to the job's number of slices.
     Returns:
         [start, slice, 2] rad, and one name per start.
     """
@@ -35,13 +42,23 @@ def starting_parameters(job: Job) -> tuple[np.ndarray, list[str]]:
         known.append(("geodesic", _geodesic(job)))
     else:
         known.append(("box_optimal", _stretched(shortest_box(job.target), job)))
-    known = known[: job.starts]
+    known += [(f"warm_{k}", _resampled(drive, job)) for k, drive in enumerate(warm)]
+    known = known[: max(job.starts, len(warm) + 1)]
     chance = [
         (f"random_{k}", _smooth_random(np.random.default_rng([job.seed, k]), job))
         for k in range(job.starts - len(known))
     ]
     names, values = zip(*known, *chance, strict=True)
     return np.stack(values), list(names)
+
+
+def _resampled(drive: np.ndarray, job: Job) -> np.ndarray:
+    """A drive stretched to the job's slices, as slice means."""
+    edges = np.linspace(0, 1, len(drive) + 1)
+    area = np.concatenate([np.zeros((1, 2)), np.cumsum(drive, axis=0)]) / len(drive)
+    at = np.linspace(0, 1, job.slices + 1)
+    mean = np.diff([np.interp(at, edges, area[:, c]) for c in (0, 1)], axis=1).T * job.slices
+    return parameters(mean * _DRAW_IN, job.bound)
 
 
 def _stretched(sequence: Sequence, job: Job) -> np.ndarray:
