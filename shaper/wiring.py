@@ -4,12 +4,22 @@ from __future__ import annotations
 
 import math
 
+import numpy as np
+
+from shaper.bench import error_grid
+from shaper.drive import dac, mixer
 from shaper.drive import line as lines
 from shaper.drive.line import Line
 from shaper.drive.line_data import read_step_response, read_touchstone
 from shaper.drive.mixer import Calibration
 from shaper.drive.path import Path
+from shaper.drive.polish import polish
+from shaper.errors import InputError
 from shaper.job import Job
+from shaper.pulse import Pulse
+
+_SHARE_OF_REACH = 0.25  # of the line's memory; by then a millionth has become a thirtieth
+_POLISH_POINTS = 3  # per axis of the tolerance box
 
 
 def line_of(job: Job) -> Line | None:
@@ -42,9 +52,90 @@ def path_of(job: Job) -> Path:
         InputError: as ``line_of``, or if the mixer's calibration is none.
     """
     facts = job.mixer
-    mixer = Calibration(facts.gain, facts.phase, facts.offset_i, facts.offset_q, facts.skew)
+    measured = Calibration(facts.gain, facts.phase, facts.offset_i, facts.offset_q, facts.skew)
     return Path(
-        calibration=None if mixer == Calibration() else mixer,
+        calibration=None if measured == Calibration() else measured,
         intermediate_frequency=job.intermediate_frequency / (2 * math.pi),
         line=line_of(job),
     )
+
+
+def play(job: Job, drive: np.ndarray, samples: np.ndarray, origin: str, source: str = "") -> Pulse:
+    """A pulse of the job's bench from the drive that is wanted: what the DAC has to play for it.
+
+    Predistorted where the job corrects by the inverse line, put on the intermediate frequency,
+    corrected for the mixer, held within the bound after all that, rounded, and polished where the
+    job says so. The pulse keeps the wanted drive beside the codes.
+
+    Args:
+        drive: [segment, 2] rad/s, wanted at the mixer's output; with ``correction = "inverse"``
+            at the qubit.
+        samples: [segment] whole samples of each.
+    Raises:
+        SafetyError: if the corrections lift the drive over the bound.
+        InputError: if the job asks for a polish through a mixer or an intermediate frequency.
+    """
+    path = path_of(job)
+    drive, samples = np.asarray(drive, dtype=float), np.asarray(samples, dtype=int)
+    if path.line is not None and job.correction == "inverse":
+        extra = _settling(path.line, job)
+        drive = np.concatenate([drive, np.zeros((1, 2))])
+        samples = np.append(samples, extra)
+        wanted = np.repeat(drive, samples, axis=0)
+        wanted = lines.inverse(path.line, wanted[:-extra], 1 / job.sample_rate, extra)
+    else:
+        wanted = np.repeat(drive, samples, axis=0)
+    played = path.to_play(wanted, job.sample_rate)
+    mixer.require_headroom(played, job.rabi_max, job.bound)
+    codes = dac.encode(played, job.rabi_max, job.dac_bits, job.bound)
+    if job.polish:
+        codes = _polished(job, path, codes, played)
+    return Pulse(origin, source, drive, samples, codes, job.rabi_max, job.dac_bits, job.sample_rate)
+
+
+def arriving(job: Job, pulse: Pulse, cells: int = 4) -> tuple[np.ndarray, np.ndarray]:
+    """What the codes of a pulse make at the qubit, through the whole path of the job.
+
+    Args:
+        cells: per sample, where the path is not straight.
+    Returns:
+        Drive [cell, 2] rad/s and durations [cell] s.
+    """
+    path = path_of(job)
+    if path.straight:
+        return pulse.played
+    codes = dac.decode(pulse.codes, pulse.full_scale, pulse.bits)
+    drive, cell = path.at_qubit(codes, pulse.sample_rate, cells)
+    return drive, np.full(len(drive), cell)
+
+
+def _settling(line: Line, job: Job) -> int:
+    """Samples after the pulse in which the predistortion may cut the tail short."""
+    whole = max(1, math.ceil(line.reach * _SHARE_OF_REACH * job.sample_rate))
+    return -(-whole // job.granularity) * job.granularity
+
+
+def _polished(job: Job, path: Path, codes: np.ndarray, played: np.ndarray) -> np.ndarray:
+    if path.calibration is not None or path.intermediate_frequency:
+        raise InputError(
+            "drive.polish: expected false with a mixer correction or an intermediate frequency, "
+            "got true"
+        )
+    kernel = None
+    if path.line is not None:
+        step = 1 / job.sample_rate
+        kernel = lines.taps(path.line, step, lines.cells_needed(path.line, played, step)).kernel
+    grid = error_grid(job, _POLISH_POINTS, _POLISH_POINTS)
+    return polish(
+        codes,
+        played,
+        job.target,
+        full_scale=job.rabi_max,
+        bits=job.dac_bits,
+        bound=job.bound,
+        sample_rate=job.sample_rate,
+        eps=grid.eps,
+        delta=grid.delta,
+        kernel=kernel,
+        seed=job.seed,
+    ).codes
