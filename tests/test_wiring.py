@@ -7,7 +7,7 @@ import pytest
 
 from shaper.drive import dac
 from shaper.errors import InputError, SafetyError
-from shaper.job import parse_job
+from shaper.job import parse_job, read_job
 from shaper.physics.propagate import propagate
 from shaper.target import Target, infidelity
 from shaper.wiring import arriving, path_of, play
@@ -91,3 +91,14 @@ def test_polish_is_asked_for_by_the_job(wanted):
 def test_corrections_that_need_too_much_room_are_refused(wanted):
     with pytest.raises(SafetyError, match="lower rabi_max by"):
         play(bench("[mixer]\ngain = 0.7\n"), wanted / 20 * 25, np.ones(40, int), "optimized")
+
+
+@pytest.mark.parametrize("name", sorted(p.name for p in DATA.parent.glob("*.toml")))
+def test_every_job_of_the_bench_has_its_path(name):
+    """The jobs that ship are valid, and the files they name are there and fit."""
+    job = read_job(DATA.parent / name)
+    if job.line.kind == "touchstone":
+        pytest.importorskip("skrf")
+    assert path_of(job).straight == (
+        job.line.kind == "none" and job.intermediate_frequency == 0 and job.mixer.gain == 1.0
+    )
