@@ -237,7 +237,7 @@ def test_derived_figures_of_the_quarter_turn():
 
 
 def test_a_sound_job_has_no_warning():
-    sound = [('gate = "z"', 'gate = "x"'), ("[pulse]", "[search]\nstop_infidelity = 0.01\n[pulse]")]
+    sound = [('gate = "z"', 'gate = "x"')]
     assert warnings_of(*sound) == []
 
 
@@ -256,8 +256,12 @@ def test_a_sound_job_has_no_warning():
             [("angle_deg = 90.0", 'angle_deg = 90.0\nequivalence = "up_to_final_z"')],
             "needs no pulse at all",
         ),
-        ([], "search.stop_infidelity: 1e-09 is below what T1 and T2 leave"),
+        (
+            [("[pulse]", "[search]\nstop_infidelity = 1e-5\n[pulse]")],
+            "search.stop_infidelity: 1e-05 is below what T1 and T2 leave",
+        ),
         ([("t1_us = 60.0", "anharmonicity_MHz = -21.0")], "1.3 periods"),
+        ([("t1_us = 60.0", "anharmonicity_MHz = -210.0")], "12 % of the anharmonicity"),
         ([("rabi_max_MHz", "min_samples = 128\nrabi_max_MHz")], "68 more samples of zero (68 ns)"),
         ([("[pulse]", "[tolerance]\ndetuning_MHz = 30.0\n[pulse]")], "more than the largest Rabi"),
     ],

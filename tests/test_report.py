@@ -15,7 +15,7 @@ from shaper.evidence.budget import Budget
 from shaper.figures import DARK, LIGHT, budget_figure
 from shaper.job import parse_job
 from shaper.physics.propagate import propagate
-from shaper.report.parts import typeset
+from shaper.report.parts import pulse_table, typeset
 from shaper.store import save_waveform
 from shaper.target import infidelity
 from shaper.workflow.compare import as_json, compare
@@ -226,6 +226,9 @@ def test_the_table_is_the_comparison(page):
         for cell in cells
     )
     assert "62" in cells  # ns
+    slow = [{"name": "a", "duration_ns": 1e5, "peak_MHz": 0.02}]
+    assert "duration (µs)" in pulse_table(slow) and "<td>100</td>" in pulse_table(slow)
+    assert "peak Rabi (kHz)" in pulse_table(slow) and "<td>20</td>" in pulse_table(slow)
 
 
 def test_the_command_writes_the_same_page_again(tmp_path, capsys, page):

@@ -46,6 +46,8 @@ def run(args) -> int:
     from shaper.cli.table import small
     from shaper.errors import InputError
     from shaper.job import read_job
+    from shaper.readable import rate, time
+    from shaper.units import NS
     from shaper.workflow.check import check_job
 
     job = read_job(args.job)
@@ -59,10 +61,10 @@ def run(args) -> int:
     over = facts["duration_over_shortest"]
     lines = [
         ("target", facts["target"]),
-        ("drive", f"{facts['rabi_max_MHz']:g} MHz Rabi at most, {facts['bound']}"),
+        ("drive", f"{rate(job.rabi_max)} Rabi at most, {facts['bound']}"),
         (
             "pulse",
-            f"{facts['duration_ns']:g} ns, {facts['slices']} slices, "
+            f"{time(job.duration, 6)}, {facts['slices']} slices, "
             f"{facts['samples']} samples (loaded: {facts['padded_samples']})",
         ),
         (
@@ -72,10 +74,10 @@ def run(args) -> int:
         ),
         (
             "shortest",
-            f"{facts['shortest_duration_ns']:.6g} ns ({facts['shortest_duration_is']})"
+            f"{time(facts['shortest_duration_ns'] * NS, 6)} ({facts['shortest_duration_is']})"
             + (f"; this pulse: {over:.4g} times that" if over else ""),
         ),
-        ("sandwich", f"{facts['sandwich_duration_ns']:.6g} ns on the sample grid"),
+        ("sandwich", f"{time(facts['sandwich_duration_ns'] * NS, 6)} on the sample grid"),
         (
             "decay",
             f"at least {small(facts['coherence_limited_infidelity'])} from T1 and T2"

@@ -7,11 +7,13 @@ import re
 from collections.abc import Mapping, Sequence
 from html import escape
 
+from shaper.figures.style import scaled
+
 COLUMNS = (
-    ("duration_ns", "duration (ns)", ".6g"),
+    ("duration_ns", "duration", ".6g"),
     ("duration_over_shortest", "times the shortest", ".4g"),
-    ("peak_MHz", "peak Rabi (MHz)", ".4g"),
-    ("rms_MHz", "rms Rabi (MHz)", ".4g"),
+    ("peak_MHz", "peak Rabi", ".4g"),
+    ("rms_MHz", "rms Rabi", ".4g"),
     ("infidelity", "infidelity, nominal", ".2e"),
     ("infidelity_mean", "mean over the box", ".2e"),
     ("infidelity_worst", "worst over the box", ".2e"),
@@ -25,10 +27,13 @@ def pulse_table(rows: Sequence[Mapping]) -> str:
     out.
     """
     shown = [column for column in COLUMNS if any(row.get(column[0]) is not None for row in rows)]
-    head = "".join(f'<th scope="col">{escape(label)}</th>' for _, label, _ in shown)
+    units = {key: _unit(key, rows) for key, _, _ in shown}
+    head = "".join(
+        f'<th scope="col">{escape(label)}{units[key][1]}</th>' for key, label, _ in shown
+    )
     body = "".join(
         f'<tr><th scope="row">{escape(row["name"])}</th>'
-        + "".join(f"<td>{number(row.get(key), form)}</td>" for key, _, form in shown)
+        + "".join(f"<td>{number(row.get(key), form, units[key][0])}</td>" for key, _, form in shown)
         + "</tr>"
         for row in rows
     )
@@ -38,11 +43,20 @@ def pulse_table(rows: Sequence[Mapping]) -> str:
     )
 
 
-def number(value: float | None, form: str) -> str:
+def _unit(key: str, rows: Sequence[Mapping]) -> tuple[float, str]:
+    """The factor for a column and what its heading says after the name."""
+    unit = next((unit for unit in ("ns", "MHz") if key.endswith(f"_{unit}")), None)
+    if unit is None:
+        return 1.0, ""
+    factor, shown = scaled(max(row.get(key) or 0.0 for row in rows), unit)
+    return factor, f" ({shown})"
+
+
+def number(value: float | None, form: str, factor: float = 1.0) -> str:
     """A number as people write it: 2.4 times a power of ten, a true minus, a dash for none."""
     if value is None:
         return "–"
-    text = f"{value:{form}}"
+    text = f"{factor * value:{form}}"
     if "e" in text:
         digits, power = text.split("e")
         return f"{digits}&#8239;×&#8239;10<sup>{int(power)}</sup>".replace("-", "−")

@@ -3,17 +3,20 @@
 from __future__ import annotations
 
 import math
+import tomllib
 
 from shaper.composite import limit, place, sandwich, stepped_z_length
 from shaper.drive.dac import padded_length
 from shaper.job import Job
 from shaper.physics.decay import coherence_limit
+from shaper.readable import rate, time
 from shaper.units import DEG, MHZ, NS
 from shaper.workflow.trial import trial_infidelity
 
 _HAIR = 1e-9  # relative; a duration this close below the limit is the limit
 _COARSE_SLICE = math.pi / 2  # a slice that turns further than this can hardly follow any shape
 _TRIAL_MISSES_BY = 10.0  # the most by which the real search was seen to beat the trial, or so
+_LEAKY_MIXING = 1e-3  # of the next level; worth a word
 _LEAKY_PERIODS = 2.0  # of the anharmonicity; a pulse shorter than this excites the next level
 
 
@@ -133,7 +136,7 @@ def _too_short(job: Job, shortest: float) -> str | None:
     if have < need * (1 - _HAIR):
         return (
             f"pulse.duration_ns: {have:.6g} ns, but {kind} shorter than {need:.6g} ns for "
-            f"{job.target_name} at {job.rabi_max / MHZ:g} MHz{at_best}; expect exit code 3. "
+            f"{job.target_name} at {rate(job.rabi_max)}{at_best}; expect exit code 3. "
             "Lengthen the pulse or raise drive.rabi_max_MHz"
         )
     weak = need / (1 - job.amplitude_tolerance)  # the drive at the low edge of its tolerance
@@ -195,7 +198,8 @@ def _frame(job: Job) -> str | None:
 
 
 def _decay(job: Job) -> str | None:
-    if job.stop_infidelity is None or (job.t1 is None and job.t2 is None):
+    asked = tomllib.loads(job.text).get("search", {}).get("stop_infidelity")  # no mere default
+    if asked is None or (job.t1 is None and job.t2 is None):
         return None
     floor = coherence_limit(job.duration, job.t1, job.t2)
     if floor <= job.stop_infidelity:
@@ -211,21 +215,28 @@ def _leakage(job: Job) -> str | None:
     if job.anharmonicity is None:
         return None
     periods = job.duration * abs(job.anharmonicity) / (2 * math.pi)
-    if periods >= _LEAKY_PERIODS:
-        return None
-    return (
-        f"qubit.anharmonicity_MHz: the pulse lasts {periods:.2g} periods of it; below "
-        f"{_LEAKY_PERIODS:g} the next level is hard to keep empty. Lengthen the pulse"
-    )
+    if periods < _LEAKY_PERIODS:
+        return (
+            f"qubit.anharmonicity_MHz: the pulse lasts {periods:.2g} periods of it; below "
+            f"{_LEAKY_PERIODS:g} the next level is hard to keep empty. Lengthen the pulse"
+        )
+    mixing = (job.rabi_max / (2 * job.anharmonicity)) ** 2  # second-order perturbation
+    if mixing > _LEAKY_MIXING:
+        return (
+            f"drive.rabi_max_MHz: at {100 * job.rabi_max / abs(job.anharmonicity):.2g} % of the "
+            f"anharmonicity a pulse that does not mind the next level errs by about {mixing:.1g}. "
+            "Judge it by shaper verify, which counts that level, or lower the drive"
+        )
+    return None
 
 
 def _padding(job: Job, padding: int) -> str | None:
     if padding == 0:
         return None
-    idle = padding / job.sample_rate / NS
+    idle = padding / job.sample_rate
     return (
         f"drive.granularity_samples, drive.min_samples: the AWG plays {padding} more samples of "
-        f"zero ({idle:.6g} ns) after the pulse; count them as idle time"
+        f"zero ({time(idle)}) after the pulse; count them as idle time"
     )
 
 
@@ -234,8 +245,8 @@ def _drift(job: Job) -> str | None:
     if reach <= job.rabi_max:
         return None
     return (
-        f"tolerance.detuning_MHz: the qubit may lie {reach / MHZ:.6g} MHz from the carrier, more "
-        f"than the largest Rabi frequency {job.rabi_max / MHZ:g} MHz; expect a long pulse. "
+        f"tolerance.detuning_MHz: the qubit may lie {rate(reach)} from the carrier, more "
+        f"than the largest Rabi frequency {rate(job.rabi_max)}; expect a long pulse. "
         "Move the carrier or narrow the tolerance"
     )
 

@@ -11,6 +11,7 @@ from shaper.drive.dac import largest_code
 from shaper.evidence import tables
 from shaper.evidence.verdict import sentence
 from shaper.pulse import Pulse, Waveform
+from shaper.readable import rate, time
 from shaper.report import Report, report_page
 from shaper.units import DEG, MHZ
 from shaper.workflow.check import check_job
@@ -78,20 +79,18 @@ def _facts(comparison: Comparison, facts: dict) -> dict[str, str]:
     job = comparison.job
     limited = facts["coherence_limited_infidelity"]
     box = (
-        f"amplitude ±{100 * job.amplitude_tolerance:g} %, "
-        f"detuning ±{job.detuning_tolerance / MHZ:g} MHz"
+        f"amplitude ±{100 * job.amplitude_tolerance:g} %, detuning ±{rate(job.detuning_tolerance)}"
     )
     terms = {
         "target": job.target_name,
-        "drive": f"Rabi frequency at most {job.rabi_max / MHZ:g} MHz ({job.bound}), "
+        "drive": f"Rabi frequency at most {rate(job.rabi_max)} ({job.bound}), "
         f"{job.dac_bits} bits, {job.sample_rate / 1e6:g} MSps",
         "tolerance box": box if job.has_tolerance else "none asked for",
-        "shortest possible": f"{facts['shortest_duration_ns']:.5g} ns "
-        f"({facts['shortest_duration_is']})",
+        "shortest possible": f"{time(comparison.shortest, 5)} ({facts['shortest_duration_is']})",
     }
     if limited is not None:
         terms["T1 and T2 cost"] = (
-            f"at least {figures.scientific(limited)} in {facts['duration_ns']:g} ns"
+            f"at least {figures.scientific(limited)} in {time(job.duration, 5)}"
         )
     return terms
 
