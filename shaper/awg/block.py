@@ -96,7 +96,7 @@ def to_bytes(words: np.ndarray, byte_order: str) -> bytes:
     return words.astype(BYTE_ORDERS[byte_order]).tobytes()
 
 
-def from_bytes(data: bytes | memoryview, byte_order: str) -> np.ndarray:
+def from_bytes(data: bytes | bytearray | memoryview, byte_order: str) -> np.ndarray:
     """[word] int16 from two bytes each.
 
     Raises:

@@ -55,6 +55,6 @@ def json_bytes(document: dict) -> bytes:
     return (json.dumps(document, indent=2, ensure_ascii=False, allow_nan=False) + "\n").encode()
 
 
-def sha256(data: bytes | memoryview) -> str:
+def sha256(data: bytes | bytearray | memoryview) -> str:
     """Fingerprint of the bytes, 64 hexadecimal digits."""
     return hashlib.sha256(data).hexdigest()

@@ -199,7 +199,7 @@ def _check(
     """Read every file that the manifest names; compare bytes, fingerprints and codes."""
     found = {}
     for entry in manifest["pulses"]:
-        words, table = {}, None
+        words, table = {}, np.empty((0, 2), np.int16)
         for line in entry["files"]:
             name = line["file"]
             if Path(name).name != name:

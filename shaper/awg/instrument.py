@@ -87,7 +87,8 @@ class Instrument:
         fields = [field.strip() for field in answer.split(",")]
         if len(fields) != 4:
             raise LinkError(f"identity: expected four fields, got {answer[:80]!r}")
-        found = dict(zip(("maker", "model", "serial", "firmware"), fields, strict=True))
+        names = ("maker", "model", "serial", "firmware")
+        found: dict[str, str] = dict(zip(names, fields, strict=True))
         wanted = self.profile.identity.model_dump()
         for key, value in wanted.items():
             if value and value != found[key]:
@@ -209,7 +210,7 @@ class Instrument:
         head = self.says.data.format(name=name)
         tail = ";" + self.says.complete
         prefix = block.header(len(data))
-        begin, answer = time.monotonic(), None
+        begin, answer = time.monotonic(), ""
         try:
             self.link.idle()
             seconds = self.profile.link.transfer_seconds(len(data))
@@ -219,7 +220,7 @@ class Instrument:
             self.note(
                 "transfer",
                 sent=f"{head}{prefix.decode()}<{len(data)} bytes>{tail}",
-                answer=answer,
+                answer=answer or None,
                 seconds=round(time.monotonic() - begin, 6),
             )
         if not _WHOLE.fullmatch(answer.strip()) or int(answer) != 1:
@@ -228,7 +229,7 @@ class Instrument:
     def fetch(self, name: str, expected: int, limit: int) -> bytes | bytearray:
         """Read a trace back: in time for ``expected`` bytes, refused beyond ``limit`` bytes."""
         text = self.says.data_query.format(name=name)
-        begin, data = time.monotonic(), None
+        begin, data = time.monotonic(), b""
         try:
             self.link.idle()
             self.link.send(self.timeout, text.encode("ascii") + b"\n")
@@ -237,7 +238,7 @@ class Instrument:
             self.note(
                 "read back",
                 sent=text,
-                answer=None if data is None else f"<{len(data)} bytes>",
+                answer=f"<{len(data)} bytes>" if data else None,
                 seconds=round(time.monotonic() - begin, 6),
             )
         return data

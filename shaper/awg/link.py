@@ -39,18 +39,23 @@ class Link(Protocol):
 
     def send(self, seconds: float, *pieces: bytes) -> None:
         """Send one whole message, its newline included; in pieces, so that none is copied."""
+        ...
 
     def read_line(self, seconds: float, limit: int = LINE_LIMIT) -> str:
         """One answer of ASCII text, without its newline."""
+        ...
 
     def read_block(self, seconds: float, limit: int) -> bytes | bytearray:
         """One answer that is a definite-length block; its data, at most ``limit`` bytes."""
+        ...
 
     def idle(self) -> None:
         """LinkError if bytes have come that nobody asked for."""
+        ...
 
     def close(self) -> None:
         """Give the connection up; never fails, may be called again."""
+        ...
 
 
 class Reader:
@@ -251,7 +256,7 @@ def open_link(address: str, seconds: float) -> Link:
     return SocketLink(address, seconds)
 
 
-def _shown(data: bytes) -> str:
+def _shown(data: bytes | bytearray) -> str:
     """Bytes for a message, not too many."""
     return repr(bytes(data[:_SHOWN])) + ("..." if len(data) > _SHOWN else "")
 

@@ -111,7 +111,14 @@ def fail(
     record.finish("interrupted" if interrupted else "failed", text)
 
 
-def _in_order(session: Session, plan: Plan, replace, resume, ours, say) -> None:
+def _in_order(
+    session: Session,
+    plan: Plan,
+    replace: bool,
+    resume: bool,
+    ours: frozenset[str],
+    say: Callable[[str], None],
+) -> None:
     record, profile = session.record, session.profile
     instrument = session.open()
     prepare(instrument, record)
@@ -206,8 +213,8 @@ def _in_place(instrument: Instrument, taken: list[Trace], record: LoadRecord) ->
     """Those whose read-back is equal already."""
     equal = []
     for trace in taken:
-        limit = instrument.profile.memory.max_bytes
-        if instrument.fetch(trace.name, limit, limit) == trace.data:
+        found, wanted = _read_back(instrument, trace, instrument.profile.memory.max_bytes)
+        if found == wanted:
             record.trace(trace.name, "in place")
             equal.append(trace)
     return equal
@@ -233,33 +240,35 @@ def _one(
     instrument.define(trace.name, trace.points)
     instrument.store(trace.name, trace.data)
     instrument.require_no_error(f"transfer {trace.name}")
-    _read_back(instrument, trace)
+    found, wanted = _read_back(instrument, trace, len(trace.data))
+    if found == trace.data != wanted:
+        raise ReadBackError(
+            f"{trace.name}: expected the words in the other byte order when asked for it, got them "
+            "in the same; leave the order that the instrument lacks empty in the profile's commands"
+        )
+    if found != wanted:
+        raise ReadBackError(f"{trace.name}: {_difference(wanted, found)}")
     record.line("read back equal", trace=trace.name, data_sha256=trace.data_sha256)
     record.trace(trace.name, "loaded")
 
 
-def _read_back(instrument: Instrument, trace: Trace) -> None:
-    """Read a trace and compare byte for byte: in the other byte order, where there is one.
+def _read_back(
+    instrument: Instrument, trace: Trace, expected: int
+) -> tuple[bytes | bytearray, bytes]:
+    """What the instrument answers, and what it should: in the other byte order, if it has one.
 
     An instrument that takes words in the wrong order answers them in the wrong order too; asked
-    for the other one, it cannot hide that.
+    for the other one, it cannot hide that. ``expected`` bytes set the deadline.
     """
     profile, wanted = instrument.profile, trace.data
     if instrument.both_orders:
         instrument.byte_order("little" if profile.data.byte_order == "big" else "big")
         wanted = np.frombuffer(trace.data, np.int16).byteswap().tobytes()
-    found = instrument.fetch(trace.name, len(trace.data), profile.memory.max_bytes)
+    found = instrument.fetch(trace.name, expected, profile.memory.max_bytes)
     if instrument.both_orders:
         instrument.byte_order(profile.data.byte_order)
     instrument.require_no_error(f"read back {trace.name}")
-    if found == wanted:
-        return
-    if found == trace.data:
-        raise ReadBackError(
-            f"{trace.name}: expected the words in the other byte order when asked for it, got them "
-            "in the same; leave the order that the instrument lacks empty in the profile's commands"
-        )
-    raise ReadBackError(f"{trace.name}: {_difference(wanted, found)}")
+    return found, wanted
 
 
 def _difference(written: bytes, found: bytes | bytearray) -> str:

@@ -10,7 +10,7 @@ import difflib
 import string
 import tomllib
 from pathlib import Path
-from typing import Annotated, Literal
+from typing import Annotated, Any, Literal
 
 from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_validator
 
@@ -234,10 +234,10 @@ class Profile(Section):
 
     title: str = Field("", max_length=500)
     identity: IdentitySection
-    link: LinkSection = Field(default_factory=LinkSection)
+    link: LinkSection = Field(default_factory=lambda: LinkSection.model_validate({}))
     memory: MemorySection
     data: DataSection
-    names: NamesSection = Field(default_factory=NamesSection)
+    names: NamesSection = Field(default_factory=lambda: NamesSection.model_validate({}))
     outputs: OutputSection
     limits: LimitSection
     marker: MarkerSection | None = None
@@ -297,7 +297,7 @@ def parse_profile(text: str, name: str = "profile") -> Profile:
 _UNION_BRANCHES = {"float", "str", "constrained-float", "literal['high']"}  # no keys of a file
 
 
-def _fault(fault: dict) -> str:
+def _fault(fault: Any) -> str:
     """Place, what was expected, what came, the nearest known key."""
     loc = [part for part in fault["loc"] if part not in _UNION_BRANCHES]
     place = ".".join(str(part) for part in loc)

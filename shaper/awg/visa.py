@@ -12,6 +12,8 @@ import contextlib
 import threading
 import time
 import warnings
+from collections.abc import Callable
+from typing import Any
 
 from shaper.awg.link import LinkError, Reader
 
@@ -36,10 +38,10 @@ class VisaLink(Reader):
         import pyvisa
 
         self.address = address
-        self._visa = pyvisa
+        self._visa: Any = pyvisa
         self._by_count = address.upper().endswith("::SOCKET")
         self._ahead = bytearray()
-        self._resource = None
+        self._resource: Any = None
         self._within(seconds, "opening", self._open)
 
     def _open(self) -> None:
@@ -134,7 +136,7 @@ class VisaLink(Reader):
                 raise LinkError(f"{self.address}: an answer beyond {_MESSAGE_LIMIT} bytes")
         return bytes(data)
 
-    def _within(self, seconds: float, doing: str, work):
+    def _within(self, seconds: float, doing: str, work: Callable[[], Any]) -> Any:
         """The result of ``work``, or LinkError when it fails or the time is up."""
         outcome = {}
 

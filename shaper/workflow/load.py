@@ -37,7 +37,7 @@ def chosen_pulses(waveform: Waveform, names: list[str] | None, where: str) -> di
             raise InputError(
                 f"{where}: expected a pulse among {', '.join(waveform.pulses)}, got {name!r}"
             )
-        if names.count(name) > 1:
+        if names and names.count(name) > 1:
             raise InputError(f"{where}: pulse {name!r} was asked for more than once")
     return {name: waveform.pulses[name] for name in names or waveform.pulses}
 
