@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import difflib
 import os
+import re
 import tomllib
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -13,12 +14,13 @@ from pydantic import BaseModel, ValidationError
 
 from shaper import rotation
 from shaper.errors import InputError
-from shaper.job.schema import GroupSection, JobFile, TargetSection
+from shaper.job.schema import ADDRESSED, GroupSection, JobFile, TargetSection
 from shaper.target import Target
 from shaper.units import DEG, MHZ, MSPS, NS, US
 
 _MAX_JOB_BYTES = 1_000_000
 _DEFAULT_STOP_NOMINAL = 1e-9
+_IS_KEY = re.compile(r"\w+")  # other parts of a fault's place name a kind, not a key
 
 
 @dataclass(frozen=True)
@@ -32,6 +34,7 @@ class Group:
         amplitude_tolerance: relative, +-.
         detuning_tolerance: rad/s, +-.
         weight: of its infidelity against the others'.
+        target_name: the target for people.
     """
 
     name: str
@@ -40,6 +43,12 @@ class Group:
     amplitude_tolerance: float
     detuning_tolerance: float
     weight: float = 1.0
+    target_name: str = ""
+
+    @property
+    def has_tolerance(self) -> bool:
+        """Whether there is a box to withstand for this qubit."""
+        return self.amplitude_tolerance > 0 or self.detuning_tolerance > 0
 
 
 @dataclass(frozen=True)
@@ -126,11 +135,12 @@ class Job:
     def groups(self) -> tuple[Group, ...]:
         """All qubits that the pulse acts on, the addressed one first."""
         addressed = Group(
-            "addressed",
+            ADDRESSED,
             self.target,
             self.detuning,
             self.amplitude_tolerance,
             self.detuning_tolerance,
+            target_name=self.target_name,
         )
         return (addressed, *self.others)
 
@@ -139,6 +149,7 @@ class Job:
         return replace(
             self,
             target=group.target,
+            target_name=group.target_name,
             detuning=group.detuning,
             amplitude_tolerance=group.amplitude_tolerance,
             detuning_tolerance=group.detuning_tolerance,
@@ -158,7 +169,7 @@ class Job:
     @property
     def has_tolerance(self) -> bool:
         """Whether there is a box to withstand at all, for any of the qubits."""
-        return any(g.amplitude_tolerance > 0 or g.detuning_tolerance > 0 for g in self.groups)
+        return any(group.has_tolerance for group in self.groups)
 
 
 def read_job(path: str | os.PathLike) -> Job:
@@ -194,7 +205,7 @@ def parse_job(text: str, name: str = "job", folder: str | os.PathLike = ".") -> 
     """
     try:
         data = tomllib.loads(text)
-    except (tomllib.TOMLDecodeError, RecursionError) as error:
+    except (ValueError, RecursionError) as error:  # ValueError: integers of thousands of digits too
         raise InputError(f"{name}: not valid TOML: {error}") from error
     try:
         file = JobFile.model_validate(data)
@@ -216,9 +227,11 @@ def _named_target(section: TargetSection, place: str) -> tuple[Target, str]:
 
 
 def _group(section: GroupSection, detuning_MHz: float, place: str) -> Group:
+    target, target_name = _named_target(section.target, f"{place}.target")
     return Group(
         name=section.name,
-        target=_named_target(section.target, f"{place}.target")[0],
+        target=target,
+        target_name=target_name,
         detuning=(detuning_MHz + section.offset_MHz) * MHZ,
         amplitude_tolerance=section.amplitude,
         detuning_tolerance=section.detuning_MHz * MHZ,
@@ -333,9 +346,9 @@ def _components(vector: list[float]) -> str:
 
 def _fault_lines(error: ValidationError, name: str) -> list[str]:
     """One line per fault: place, what was expected, what came, the nearest known key."""
-    lines = []
+    lines: dict[str, str] = {}  # by place
     for fault in error.errors(include_url=False):
-        place = ".".join(str(part) for part in fault["loc"] if not str(part).startswith("list["))
+        place = ".".join(str(part) for part in fault["loc"])
         came = repr(fault["input"])
         came = came if len(came) <= 60 else came[:57] + "..."
         if fault["type"] == "extra_forbidden":
@@ -350,10 +363,25 @@ def _fault_lines(error: ValidationError, name: str) -> list[str]:
             joint = "." if place and ":" in reason.split(" ")[0] else ": "
             line = f"{place}{joint}{reason}" if place else reason
         else:
+            place = ".".join(part for part in map(str, fault["loc"]) if _IS_KEY.fullmatch(part))
             expected = fault["msg"].removeprefix("Input should be ")
+            if fault["type"] == "too_short":
+                expected = f"at least {fault['ctx']['min_length']} entries"
+            elif fault["type"] == "too_long":
+                expected = f"at most {fault['ctx']['max_length']} entries"
+            if place in lines:  # a key of two kinds is at fault once for each
+                expected = (
+                    lines[place].removeprefix(f"{place}: expected ").removesuffix(f", got {came}")
+                    + f" or {expected}"
+                )
             line = f"{place}: expected {expected}, got {came}"
-        lines.append(f"{name}: {line}")
-    return lines
+        lines[place] = line
+    return [f"{name}: {_printable(line)}" for line in lines.values()]
+
+
+def _printable(line: str) -> str:
+    """One line for a terminal, whatever stood in the file."""
+    return "".join(c if c.isprintable() else f"\\u{ord(c):04x}" for c in line)
 
 
 def _known_keys(loc: tuple) -> list[str]:

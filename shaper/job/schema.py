@@ -2,17 +2,24 @@
 
 from __future__ import annotations
 
+import math
 from typing import Annotated, Literal
 
 from pydantic import BaseModel, ConfigDict, Field, model_validator
 
 MAX_SLICES = 100_000
-Vector = Annotated[list[float], Field(min_length=3, max_length=3)]
-Complex = Annotated[list[float], Field(min_length=2, max_length=2)]
+MAX_SAMPLES = 10_000_000
+MAX_TURN = 100_000  # rad in all; each rad costs the engine a step
+# Wide enough for any bench, narrow enough that no product of two of them overflows.
+Number = Annotated[float, Field(ge=-1e12, le=1e12)]
+Size = Annotated[float, Field(ge=0, le=1e12)]
+Positive = Annotated[float, Field(ge=1e-12, le=1e12)]
+Vector = Annotated[list[Number], Field(min_length=3, max_length=3)]
+Complex = Annotated[list[Number], Field(min_length=2, max_length=2)]
 ComplexRow = Annotated[list[Complex], Field(min_length=2, max_length=2)]
-Positive = Annotated[float, Field(gt=0)]
 Degrees = Annotated[float, Field(ge=-1e6, le=1e6)]
 
+ADDRESSED = "addressed"  # name of the qubit of the sections qubit, target and tolerance
 TARGET_FORMS = ("gate", "axis", "euler_deg", "unitary", "from_state")
 
 
@@ -25,10 +32,10 @@ class Section(BaseModel):
 class Qubit(Section):
     """What is driven."""
 
-    detuning_MHz: float = Field(0.0, description="qubit minus carrier frequency")
+    detuning_MHz: Number = Field(0.0, description="qubit minus carrier frequency")
     t1_us: Positive | None = Field(None, description="energy relaxation time")
     t2_us: Positive | None = Field(None, description="coherence time, at most 2 t1_us")
-    anharmonicity_MHz: float | None = Field(
+    anharmonicity_MHz: Number | None = Field(
         None, description="second transition minus first; leakage is modelled if given"
     )
 
@@ -64,7 +71,7 @@ class Drive(Section):
         "model",
         description="of the line: in the model, by predistortion, or not at all",
     )
-    intermediate_MHz: float = Field(
+    intermediate_MHz: Number = Field(
         0.0, description="digital intermediate frequency, its phase counted from sample 0"
     )
     polish: bool = Field(False, description="a last search on the integer codes themselves")
@@ -105,16 +112,16 @@ class MixerSection(Section):
 
     gain: Positive = Field(1.0, description="of the Q arm, relative to I")
     phase_deg: float = Field(0.0, gt=-45, lt=45, description="quadrature error")
-    offset_i_MHz: float = Field(0.0, description="carrier leakage in I, as a Rabi frequency")
-    offset_q_MHz: float = Field(0.0, description="carrier leakage in Q, as a Rabi frequency")
-    skew_ns: float = Field(0.0, description="by which Q is late")
+    offset_i_MHz: Number = Field(0.0, description="carrier leakage in I, as a Rabi frequency")
+    offset_q_MHz: Number = Field(0.0, description="carrier leakage in Q, as a Rabi frequency")
+    skew_ns: Number = Field(0.0, description="by which Q is late")
 
 
 class NoiseSection(Section):
     """What drifts and fluctuates; used by verify."""
 
-    detuning_sigma_kHz: float = Field(0.0, ge=0, description="quasi-static, rms")
-    amplitude_sigma: float = Field(0.0, ge=0, description="quasi-static, relative, rms")
+    detuning_sigma_kHz: Size = Field(0.0, description="quasi-static, rms")
+    amplitude_sigma: Size = Field(0.0, description="quasi-static, relative, rms")
     detuning_psd_file: str | None = Field(
         None, description="CSV frequency_Hz,density_Hz2_per_Hz, relative to the job file"
     )
@@ -162,7 +169,7 @@ class TargetSection(Section):
             raise ValueError("equivalence: has no meaning for a state-to-state target")
         for name in ("axis", "from_state", "to_state"):
             vector = getattr(self, name)
-            if vector is not None and not any(vector):
+            if vector is not None and max(map(abs, vector)) < 1e-12:
                 raise ValueError(f"{name}: expected a vector other than zero, got {vector}")
         return self
 
@@ -171,30 +178,30 @@ class Tolerance(Section):
     """The box that the pulse must withstand."""
 
     amplitude: float = Field(0.0, ge=0, lt=1, description="relative amplitude error, +-")
-    detuning_MHz: float = Field(0.0, ge=0, description="drift of the resonance, +-")
+    detuning_MHz: Size = Field(0.0, description="drift of the resonance, +-")
 
 
 class GroupSection(Section):
     """Another qubit on the same line, with a target of its own."""
 
     name: str = Field(max_length=100, description="of the qubit")
-    offset_MHz: float = Field(description="of its frequency from the addressed qubit's")
+    offset_MHz: Number = Field(description="of its frequency from the addressed qubit's")
     target: TargetSection = Field(description="what the same pulse must do to it")
     amplitude: float = Field(0.0, ge=0, lt=1, description="relative amplitude error, +-")
-    detuning_MHz: float = Field(0.0, ge=0, description="drift of its resonance, +-")
+    detuning_MHz: Size = Field(0.0, description="drift of its resonance, +-")
     weight: Positive = Field(1.0, description="of its infidelity against the others'")
 
 
 class ShapeSection(Section):
     """What the waveform should look like, apart from what it does."""
 
-    smoothness: float = Field(0.0, ge=0, description="weight of the mean squared second difference")
+    smoothness: Size = Field(0.0, description="weight of the mean squared second difference")
     max_bandwidth_MHz: Positive | None = Field(
         None, description="band, to either side of the carrier, that should hold the energy"
     )
     band_weight: Positive = Field(10.0, description="weight of the part of the energy outside")
-    rise_ns: float = Field(
-        0.0, ge=0, description="the drive rises from zero and falls back to it in this time"
+    rise_ns: Size = Field(
+        0.0, description="the drive rises from zero and falls back to it in this time"
     )
 
 
@@ -239,6 +246,27 @@ class JobFile(Section):
     pulse: PulseSection
     shape: ShapeSection = Field(default_factory=ShapeSection)
     search: Search = Field(default_factory=Search)
+
+    @model_validator(mode="after")
+    def _readable(self):
+        for place, text in [
+            ("title", self.title),
+            *((f"group.{k}.name", group.name) for k, group in enumerate(self.group)),
+        ]:
+            if not text.isprintable():
+                raise ValueError(f"{place}: expected printable text on one line, got {text!r}")
+        return self
+
+    @model_validator(mode="after")
+    def _names_differ(self):
+        taken = {ADDRESSED}
+        for k, group in enumerate(self.group):
+            if group.name in taken:
+                raise ValueError(
+                    f"group.{k}.name: expected a name that no other qubit has, got {group.name!r}"
+                )
+            taken.add(group.name)
+        return self
 
     @model_validator(mode="after")
     def _clockwork(self):
@@ -292,5 +320,22 @@ class JobFile(Section):
             )
         if slices > MAX_SLICES:
             raise ValueError(
-                f"pulse.duration_ns: expected at most {MAX_SLICES} slices, got {round(slices)}"
+                f"pulse.duration_ns: expected at most {MAX_SLICES} slices, got {slices:.10g}"
+            )
+        samples = self.pulse.duration_ns * self.drive.sample_rate_MSps / 1e3
+        if samples > MAX_SAMPLES:
+            raise ValueError(
+                f"pulse.duration_ns: expected at most {MAX_SAMPLES} samples, got {samples:.10g}"
+            )
+        rates = [abs(self.qubit.detuning_MHz) + self.tolerance.detuning_MHz]
+        rates += [
+            abs(self.qubit.detuning_MHz + group.offset_MHz) + group.detuning_MHz
+            for group in self.group
+        ]
+        turn = math.hypot(self.drive.rabi_max_MHz, max(rates)) * self.pulse.duration_ns
+        turn *= 2 * math.pi * 1e-3
+        if turn > MAX_TURN:
+            raise ValueError(
+                "pulse.duration_ns: expected a waveform that turns the qubit by at most "
+                f"{MAX_TURN} rad in all, got {turn:.4g} rad"
             )
