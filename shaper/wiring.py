@@ -6,11 +6,10 @@ import math
 
 import numpy as np
 
-from shaper.bench import error_grid
+from shaper.bench import error_grid, line_of
 from shaper.drive import dac, mixer
 from shaper.drive import line as lines
 from shaper.drive.line import Line
-from shaper.drive.line_data import read_step_response, read_touchstone
 from shaper.drive.mixer import Calibration
 from shaper.drive.path import Path
 from shaper.drive.polish import polish
@@ -20,29 +19,6 @@ from shaper.pulse import Pulse
 
 _SHARE_OF_REACH = 0.25  # of the line's memory; by then a millionth has become a thirtieth
 _POLISH_POINTS = 3  # per axis of the tolerance box
-
-
-def line_of(job: Job) -> Line | None:
-    """The drive line of a job, or None where it has none.
-
-    Raises:
-        InputError: if its file is not what it should be, or its band lies below the pulse's.
-    """
-    facts = job.line
-    if facts.kind == "none":
-        return None
-    if facts.kind == "first_order":
-        line = lines.first_order(facts.bandwidth)
-    elif facts.kind == "gaussian":
-        line = lines.gaussian(facts.bandwidth)
-    elif facts.kind == "step_response":
-        line = read_step_response(facts.file, job.sample_rate)
-    else:
-        carrier = job.carrier / (2 * math.pi)
-        line = read_touchstone(facts.file, carrier, job.sample_rate, facts.ports)
-    if not job.find_shortest:
-        lines.require_band(line, job.duration)
-    return line
 
 
 def path_of(job: Job) -> Path:
