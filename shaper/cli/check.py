@@ -24,12 +24,6 @@ def add(commands):
     )
     command.add_argument("job", metavar="JOB.toml", help="the job file")
     command.add_argument(
-        "--line-MHz",
-        metavar="MHZ",
-        type=float,
-        help="bandwidth (-3 dB) of the drive line, to warn of pulses wider than it",
-    )
-    command.add_argument(
         "--no-trial",
         action="store_true",
         help="leave out the short trial search that a job with a tolerance and a "
@@ -44,51 +38,47 @@ def run(args) -> int:
     import json
 
     from shaper.cli.table import small
-    from shaper.errors import InputError
     from shaper.job import read_job
     from shaper.readable import rate, time
     from shaper.units import NS
     from shaper.workflow.check import check_job
 
     job = read_job(args.job)
-    line = args.line_MHz
-    if line is not None and not line > 0:
-        raise InputError(f"--line-MHz: expected a positive number, got {line:g}")
-    facts = check_job(job, line and line * 1e6, trial=not args.no_trial)
+    facts = check_job(job, trial=not args.no_trial)
     if args.json:
         print(json.dumps(facts, indent=2, ensure_ascii=False))
         return 0
-    over = facts["duration_over_shortest"]
+    over, turn = facts["duration_over_shortest"], facts["largest_total_angle_deg"]
+    limited, line = facts["coherence_limited_infidelity"], facts["line_bandwidth_MHz"]
+    pulse = "the shortest that reaches stop_infidelity: to be found"
+    if facts["samples"] is not None:
+        pulse = (
+            f"{time(job.duration, 6)}, {facts['slices']} slices, {facts['samples']} samples "
+            f"(loaded: {facts['padded_samples']})"
+        )
     lines = [
         ("target", facts["target"]),
         ("drive", f"{rate(job.rabi_max)} Rabi at most, {facts['bound']}"),
-        (
-            "pulse",
-            f"{time(job.duration, 6)}, {facts['slices']} slices, "
-            f"{facts['samples']} samples (loaded: {facts['padded_samples']})",
-        ),
+        ("line", line and f"{line:.4g} MHz, correction: {job.correction}"),
+        ("pulse", pulse),
         (
             "angle",
-            f"up to {facts['largest_angle_per_slice_deg']:.4g} degrees a slice, "
-            f"{facts['largest_total_angle_deg']:.5g} in all",
+            f"up to {facts['largest_angle_per_slice_deg']:.4g} degrees a slice"
+            + (f", {turn:.5g} in all" if turn is not None else ""),
         ),
         (
             "shortest",
             f"{time(facts['shortest_duration_ns'] * NS, 6)} ({facts['shortest_duration_is']})"
-            + (f"; this pulse: {over:.4g} times that" if over else ""),
+            + (f"; this pulse: {over:.4g} times that" if over is not None else ""),
         ),
         ("sandwich", f"{time(facts['sandwich_duration_ns'] * NS, 6)} on the sample grid"),
-        (
-            "decay",
-            f"at least {small(facts['coherence_limited_infidelity'])} from T1 and T2"
-            if facts["coherence_limited_infidelity"] is not None
-            else "not asked for (no t1_us, t2_us)",
-        ),
+        ("decay", limited is not None and f"at least {small(limited)} from T1 and T2"),
     ]
     if facts["title"]:
         print(facts["title"])
     for name, text in lines:
-        print(f"  {name:<10}{text}")
+        if text:
+            print(f"  {name:<10}{text}")
     for warning in facts["warnings"]:
         print(f"shaper: warning: {warning}", file=sys.stderr)
     print("valid" + (f", {len(facts['warnings'])} warning(s)" if facts["warnings"] else ""))

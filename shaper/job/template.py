@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import types
 from collections.abc import Mapping
-from typing import Any, Union, get_args, get_origin
+from typing import Any, Literal, Union, get_args, get_origin
 
 from pydantic import BaseModel
 from pydantic.fields import FieldInfo
@@ -26,6 +26,14 @@ _EXAMPLES: dict[str, Any] = {
     "to_state": [1.0, 0.0, 0.0],
     "gate": "z",
     "stop_infidelity": 1e-6,
+    "bandwidth_MHz": 120.0,
+    "max_bandwidth_MHz": 100.0,
+    "carrier_GHz": 5.0,
+    "file": "line.csv",
+    "detuning_psd_file": "drift.csv",
+    "name": "neighbor",
+    "offset_MHz": 12.0,
+    "target": {"gate": "identity", "equivalence": "up_to_final_z"},
 }
 
 
@@ -60,10 +68,8 @@ def _section_lines(
     summary = (section.__doc__ or "").strip().splitlines()[0] if section.__doc__ else ""
     lines = ["", _commented(("# " if idle else "") + heading, summary)]
     for key, field in section.model_fields.items():
-        nested, _ = _section(field)
-        if nested is None:
-            line = _key_line(key, field, given or {})
-            lines.append(line if not idle or line.startswith("#") else "# " + line)
+        line = _key_line(key, field, given or {})
+        lines.append(line if not idle or line.startswith("#") else "# " + line)
     return lines
 
 
@@ -82,6 +88,9 @@ def _section(field: FieldInfo) -> tuple[type[BaseModel] | None, bool]:
 
 def _key_line(key: str, field: FieldInfo, given: Mapping[str, Any]) -> str:
     comment = field.description or ""
+    words = [word for word in _choices(field.annotation) if word not in comment]
+    if words:
+        comment += f" ({', '.join(_choices(field.annotation))})"
     if given.get(key) is not None:
         return _commented(f"{key} = {toml_value(given[key])}", comment)
     default = field.get_default(call_default_factory=True, validated_data={})
@@ -92,12 +101,19 @@ def _key_line(key: str, field: FieldInfo, given: Mapping[str, Any]) -> str:
     return _commented(f"# {key} = {shown}", comment)
 
 
+def _choices(annotation: Any) -> list[str]:
+    """The words that a key may take, where it takes words of a list."""
+    if get_origin(annotation) is Literal:
+        return [str(word) for word in get_args(annotation)]
+    return [word for part in get_args(annotation) for word in _choices(part)]
+
+
 def _commented(text: str, comment: str) -> str:
     return f"{text:<{_WIDTH}}  # {comment}" if comment else text
 
 
 def toml_value(value: Any) -> str:
-    """A string, number, truth value or list of such as TOML writes it.
+    """A string, number, truth value, list or table of such as TOML writes it.
 
     >>> toml_value(["z", 90.0, True])
     '["z", 90.0, true]'
@@ -120,4 +136,8 @@ def toml_value(value: Any) -> str:
         return repr(value)
     if isinstance(value, (list, tuple)):
         return "[" + ", ".join(toml_value(item) for item in value) + "]"
-    raise TypeError(f"expected a string, number, truth value or list, got {type(value).__name__}")
+    if isinstance(value, Mapping):
+        return "{ " + ", ".join(f"{k} = {toml_value(v)}" for k, v in value.items()) + " }"
+    raise TypeError(
+        f"expected a string, number, truth value, list or table, got {type(value).__name__}"
+    )

@@ -5,8 +5,10 @@ from __future__ import annotations
 import math
 import tomllib
 
+from shaper.bench import line_of
 from shaper.composite import limit, place, sandwich, stepped_z_length
 from shaper.drive.dac import padded_length
+from shaper.drive.line import Line
 from shaper.job import Job
 from shaper.physics.decay import coherence_limit
 from shaper.readable import rate, time
@@ -20,49 +22,54 @@ _LEAKY_MIXING = 1e-3  # of the next level; worth a word
 _LEAKY_PERIODS = 2.0  # of the anharmonicity; a pulse shorter than this excites the next level
 
 
-def check_job(job: Job, line_bandwidth: float | None = None, trial: bool = False) -> dict:
+def check_job(job: Job, trial: bool = False) -> dict:
     """Derived figures of a job and what speaks against running it.
 
     Args:
-        line_bandwidth: Hz, -3 dB point of the drive line to either side of the carrier; None if
-            not known.
         trial: whether a job with a tolerance and a ``stop_infidelity`` gets a short trial search
             (a few seconds) to see if the one is within reach of the other.
     Returns:
         A flat dict, unit in each key, None where a figure has no meaning; ``warnings`` is a
-        list of sentences, each with its remedy.
+        list of sentences, each with its remedy. Where the duration is to be found, figures that
+        depend on it are None.
+    Raises:
+        InputError: if the job's measured line cannot be read, or its band lies below the pulse's.
     """
     shortest = limit(job.target, job.bound) / job.rabi_max  # s
     plain = place(sandwich(job.target, job.bound), job)
     samples = job.slices * job.samples_per_slice
     padded = padded_length(samples, job.granularity, job.min_samples)
-    asks = trial and job.has_tolerance and job.stop_infidelity is not None
-    reached = trial_infidelity(job) if asks and job.bound == "circle" else None
+    fixed = not job.find_shortest
+    asks = trial and fixed and job.has_tolerance and job.stop_infidelity is not None
+    able = job.bound == "circle" and not job.others
+    reached = trial_infidelity(job) if asks and able else None
+    line = line_of(job)
     decays = job.t1 is not None or job.t2 is not None
     facts = {
         "title": job.title,
         "target": job.target_name,
         "rabi_max_MHz": job.rabi_max / MHZ,
         "bound": job.bound,
-        "duration_ns": job.duration / NS,
-        "slices": job.slices,
-        "samples": samples,
-        "padded_samples": padded,
+        "duration_ns": job.duration / NS if fixed else None,
+        "slices": job.slices if fixed else None,
+        "samples": samples if fixed else None,
+        "padded_samples": padded if fixed else None,
         "largest_angle_per_slice_deg": job.rabi_max * job.slice_duration / DEG,
-        "largest_total_angle_deg": job.rabi_max * job.duration / DEG,
+        "largest_total_angle_deg": job.rabi_max * job.duration / DEG if fixed else None,
         "shortest_duration_ns": shortest / NS,
         "shortest_duration_is": (
             "time-optimal, published" if job.bound == "circle" else "best known for the box"
         ),
-        "duration_over_shortest": job.duration / shortest if shortest > 0 else None,
-        "least_worst_infidelity": least_worst_infidelity(job),
+        "duration_over_shortest": job.duration / shortest if fixed and shortest > 0 else None,
+        "least_worst_infidelity": least_worst_infidelity(job) if fixed else None,
         "trial_worst_infidelity": reached,
         "sandwich_duration_ns": plain.duration / NS,
         "coherence_limited_infidelity": (
-            coherence_limit(job.duration, job.t1, job.t2) if decays else None
+            coherence_limit(job.duration, job.t1, job.t2) if fixed and decays else None
         ),
+        "line_bandwidth_MHz": line.bandwidth / 1e6 if line is not None else None,
         "frame_update": frame_update(job),
-        "warnings": _warnings(job, shortest, padded - samples, line_bandwidth, reached),
+        "warnings": _warnings(job, shortest, padded - samples, line, reached),
     }
     return {
         key: float(f"{value:.12g}") if isinstance(value, float) else value  # 120, not 120.00..01
@@ -108,23 +115,19 @@ def frame_update(job: Job) -> str | None:
 
 
 def _warnings(
-    job: Job,
-    shortest: float,
-    padding: int,
-    line_bandwidth: float | None,
-    reached: float | None,
+    job: Job, shortest: float, padding: int, line: Line | None, reached: float | None
 ) -> list[str]:
-    found = [
-        _too_short(job, shortest),
-        _too_few_slices(job),
-        _out_of_reach(job, reached),
-        _frame(job),
-        _decay(job),
-        _leakage(job),
-        _padding(job, padding),
-        _drift(job),
-        _line(job, line_bandwidth),
-    ]
+    found = [_frame(job), _drift(job), _line(job, line), _mixing(job), _coarse(job)]
+    if not job.find_shortest:
+        found = [
+            _too_short(job, shortest),
+            _too_few_slices(job),
+            _out_of_reach(job, reached),
+            *found,
+            _decay(job),
+            _leakage(job),
+            _padding(job, padding),
+        ]
     return [sentence for sentence in found if sentence]
 
 
@@ -161,6 +164,10 @@ def _too_few_slices(job: Job) -> str | None:
                 f"{job.target_name}, the pulse has {job.duration / NS:.6g} ns. "
                 + ("Take shorter slices or a longer pulse" if finer else "Lengthen the pulse")
             )
+    return None
+
+
+def _coarse(job: Job) -> str | None:
     turn = job.rabi_max * job.slice_duration
     if turn > _COARSE_SLICE:
         return (
@@ -220,6 +227,12 @@ def _leakage(job: Job) -> str | None:
             f"qubit.anharmonicity_MHz: the pulse lasts {periods:.2g} periods of it; below "
             f"{_LEAKY_PERIODS:g} the next level is hard to keep empty. Lengthen the pulse"
         )
+    return None
+
+
+def _mixing(job: Job) -> str | None:
+    if job.anharmonicity is None:
+        return None
     mixing = (job.rabi_max / (2 * job.anharmonicity)) ** 2  # second-order perturbation
     if mixing > _LEAKY_MIXING:
         return (
@@ -251,21 +264,14 @@ def _drift(job: Job) -> str | None:
     )
 
 
-def _line(job: Job, bandwidth: float | None) -> str | None:
-    if bandwidth is None:
+def _line(job: Job, line: Line | None) -> str | None:
+    if line is None or job.correction != "none":
         return None
-    have = bandwidth / 1e6
-    if bandwidth < 1 / job.duration:
-        return (
-            f"pulse.duration_ns: a pulse of {job.duration / NS:.6g} ns is wider than the line: it "
-            f"needs at least 1/duration = {1e-6 / job.duration:.4g} MHz, the line passes "
-            f"{have:.4g} MHz. Lengthen the pulse or widen the line"
-        )
-    fastest = 0.5 / job.slice_duration  # the drive may turn round from slice to slice
-    if bandwidth < fastest:
-        return (
-            f"pulse.slice_ns: slices may change at up to {fastest / 1e6:.4g} MHz, the line passes "
-            f"{have:.4g} MHz: the qubit sees a smoother pulse than the one computed without the "
-            "line. Take longer slices, or optimize through the line"
-        )
-    return None
+    fastest = 0.5 / job.slice_duration  # Hz; the drive may turn round from slice to slice
+    if line.bandwidth >= fastest:
+        return None
+    return (
+        f"drive.correction: slices may change at up to {fastest / 1e6:.4g} MHz, the line passes "
+        f"{line.bandwidth / 1e6:.4g} MHz and nothing makes up for it: the pulse at the qubit is "
+        'another one. Take "model" or "inverse", or longer slices'
+    )
