@@ -41,7 +41,7 @@ def encode(drive: np.ndarray, full_scale: float, bits: int, bound: str) -> np.nd
     if not np.all(reach <= top * (1 + _ROUND_OFF)):
         raise SafetyError(
             f"drive: expected at most {full_scale:.6g} rad/s ({bound}), "
-            f"got {np.nanmax(reach) / top * full_scale:.6g} rad/s"
+            f"got {np.max(reach) / top * full_scale:.6g} rad/s"
         )
     codes = np.clip(np.rint(exact), -top, top)
     if bound == "circle":
