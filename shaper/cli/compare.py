@@ -51,8 +51,8 @@ def run(args) -> int:
     comparison = compare(load_waveform(args.file), args.against)
     for path, picture in ((args.figure, draw), (args.maps, draw_maps)):
         if path:
-            picture(comparison, path)
-            print(f"shaper: figure in {path}", file=sys.stderr)
+            for written in picture(comparison, path):
+                print(f"shaper: figure in {written}", file=sys.stderr)
     print(json.dumps(as_json(comparison)) if args.json else text(comparison))
     return 0
 
@@ -66,12 +66,9 @@ def text(comparison) -> str:
 
     fill = TextWrapper(_WIDTH, break_on_hyphens=False).fill
     job = comparison.job
+    proved = job.has_tolerance
     kind = "time-optimal" if job.bound == "circle" else "best known"
-    sides = []
-    if job.amplitude_tolerance:
-        sides.append(f"amplitude +-{100 * job.amplitude_tolerance:g} %")
-    if job.detuning_tolerance:
-        sides.append(f"detuning +-{rate(job.detuning_tolerance, 6)}")
+    sides = _sides(job.groups[0])
     decay = [
         f"{name} {time(value, 6)}" for name, value in (("T1", job.t1), ("T2", job.t2)) if value
     ]
@@ -80,7 +77,8 @@ def text(comparison) -> str:
         *([job.title] if job.title else []),
         f"target     {job.target_name}",
         f"drive      {rate(job.rabi_max, 6)} Rabi ({job.bound}), {job.dac_bits} bits",
-        f"tolerance  {', '.join(sides) or 'none: nominal, mean and worst are one'}",
+        f"tolerance  {sides or 'none: nominal, mean and worst are one'}",
+        *(_qubit_line(job, group) for group in job.others),
         *([f"decay      {', '.join(decay)}"] if decay else []),
         f"limit      {time(comparison.shortest, 6)} ({kind}, without errors)",
         "",
@@ -88,9 +86,11 @@ def text(comparison) -> str:
         "",
         fill(
             f"{measure}, from the DAC codes. Mean and worst: over the tolerance box"
-            + (" on one grid; guaranteed: proved for every point of it." if sides else "."),
+            + (" on one grid; guaranteed: proved for every point of it." if proved else ".")
+            + (" The largest of all qubits; mean: by weight." if job.others else ""),
         ),
         "",
+        *([_qubit_table(comparison), ""] if job.others else []),
         _robustness_table(comparison),
         "",
         fill(
@@ -103,12 +103,57 @@ def text(comparison) -> str:
                 if job.anharmonicity
                 else ""
             )
-            + "Decay: infidelity of idling as long (T1, T2); total: worst plus decay.",
+            + "Decay: infidelity of idling as long (T1, T2); total: worst plus decay."
+            + (
+                " Windows are those of all qubits, leading terms of the addressed one."
+                if job.others
+                else ""
+            ),
         ),
     ]
     if comparison.frame_update:
         lines += ["", fill("Frame update: " + FRAME_UPDATE[comparison.frame_update])]
     return "\n".join([*lines, "", fill(f"Verdict: {sentence(comparison.verdict, job)}")])
+
+
+def _sides(group) -> str:
+    """The tolerance box of one qubit in words, or nothing."""
+    from shaper.readable import rate
+
+    sides = []
+    if group.amplitude_tolerance:
+        sides.append(f"amplitude +-{100 * group.amplitude_tolerance:g} %")
+    if group.detuning_tolerance:
+        sides.append(f"detuning +-{rate(group.detuning_tolerance, 6)}")
+    return ", ".join(sides)
+
+
+def _qubit_line(job, group) -> str:
+    """What is asked of a further qubit."""
+    from shaper.readable import rate
+
+    offset = group.detuning - job.detuning
+    where = f"{rate(abs(offset), 6)} {'above' if offset >= 0 else 'below'} the addressed one"
+    return f"qubit      {group.name}, {where}: {group.target_name}; {_sides(group) or 'no tolerance'}"
+
+
+def _qubit_table(comparison) -> str:
+    """Every qubit under the pulses worth showing."""
+    from shaper.cli.table import aligned, small
+    from shaper.workflow.compare import worth_showing
+
+    job, shown = comparison.job, worth_showing(comparison)
+    proved = job.has_tolerance
+    header = ["pulse", "qubit", "target", "nominal", "mean", "worst"] + ["guaranteed"] * proved
+    table = [
+        [row.name, group.name, group.target_name]
+        + [small(value) for value in (found.nominal, found.mean, found.worst)]
+        + [small(found.guaranteed)] * proved
+        for row in comparison.rows
+        if row.name in shown
+        for group, found in zip(job.groups, row.groups, strict=True)
+    ]
+    return aligned(header, table, text_columns=(0, 1, 2))
 
 
 def _main_table(comparison) -> str:

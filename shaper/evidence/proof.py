@@ -85,15 +85,24 @@ class Proof:
 def prove_pulse(pulse: Pulse, job: Job, tolerance: float = 0.01) -> Proof:
     """The proof for a pulse, as its DAC codes play it, over the tolerance box of a job.
 
-    It speaks of the ideal two-level qubit: neither leakage nor decay is in it.
+    Of several qubits the one with the largest bound, which therefore holds for all of them.
+    It speaks of ideal two-level qubits: neither leakage nor decay is in it.
     """
-    return prove(
-        *pulse.played,
-        job.target,
-        job.amplitude_tolerance,
-        job.detuning_tolerance,
-        job.detuning,
-        tolerance=tolerance,
+    return max(prove_groups(pulse, job, tolerance), key=lambda proof: proof.guaranteed)
+
+
+def prove_groups(pulse: Pulse, job: Job, tolerance: float = 0.01) -> tuple[Proof, ...]:
+    """The proof for every qubit of the job, each over its own box, the addressed one first."""
+    return tuple(
+        prove(
+            *pulse.played,
+            group.target,
+            group.amplitude_tolerance,
+            group.detuning_tolerance,
+            group.detuning,
+            tolerance=tolerance,
+        )
+        for group in job.groups
     )
 
 

@@ -7,18 +7,19 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from shaper.bench import error_grid
+from shaper.bench import dense_grid
 from shaper.composite.sequence import Sequence, played_ideally
 from shaper.evidence.levels import level_infidelity, on_levels
 from shaper.evidence.order import Leading, leading
-from shaper.evidence.proof import prove_pulse
-from shaper.evidence.score import box_infidelity
+from shaper.evidence.proof import prove_groups
+from shaper.evidence.score import GroupFigures, box_infidelity, group_infidelities, together
 from shaper.evidence.window import tolerance_window
 from shaper.job import Job
 from shaper.physics.decay import coherence_limit
 from shaper.pulse import Pulse
 
-_LEVEL_POINTS = 9  # per axis: levels cost a hundred times what the qubit does
+_LEVEL_POINTS = 9  # per axis, at least: levels cost a hundred times what the qubit does
+_LEVEL_DENSITY = 2.0  # points per rad of reach
 THRESHOLDS = (1e-4, 1e-3)  # of the tolerance windows
 
 
@@ -38,8 +39,21 @@ class OnLevels:
 
 
 @dataclass(frozen=True)
+class GroupRow(GroupFigures):
+    """``GroupFigures`` with the proved upper bound over the qubit's box.
+
+    Attributes:
+        guaranteed: None if no qubit of the job has a tolerance.
+    """
+
+    guaranteed: float | None
+
+
+@dataclass(frozen=True)
 class Row:
     """One pulse of the comparison; every figure from its integer codes, unless it says otherwise.
+
+    Of several qubits the infidelities are the largest, the mean is the mean by weight.
 
     Attributes:
         name: as in the file or the library.
@@ -51,16 +65,19 @@ class Row:
         peak: largest amplitude, rad/s.
         rms: of the amplitude over the duration, rad/s.
         energy: integral of the squared amplitude, rad^2/s.
+        groups: the same four figures for every qubit of the job, the addressed one first.
         nominal: infidelity without errors.
         mean: infidelity over the tolerance box.
         worst: largest infidelity on the grid over the tolerance box.
         guaranteed: proved upper bound of it over the whole box; None without a tolerance.
         ideal_worst: ``worst`` of the sequence on paper, without sample grid and codes: the rest
             is the price of the grid. None where there is no sequence.
-        amplitude_windows: largest +- relative amplitude error below each of ``THRESHOLDS``.
+        amplitude_windows: largest +- relative amplitude error below each of ``THRESHOLDS``, for
+            all qubits.
         detuning_windows: rad/s, likewise.
-        amplitude_order, detuning_order: leading term of the infidelity, of the sequence on paper
-            where there is one, else of the float waveform; detuning in units of W_max.
+        amplitude_order, detuning_order: leading term of the addressed qubit's infidelity, of the
+            sequence on paper where there is one, else of the float waveform; detuning in units of
+            W_max.
         levels: what three levels make of it; None without an anharmonicity. All other
             infidelities are those of two levels.
         coherence: infidelity of idling as long, from the job's T1 and T2; None without them.
@@ -74,6 +91,7 @@ class Row:
     peak: float
     rms: float
     energy: float
+    groups: tuple[GroupRow, ...]
     nominal: float
     mean: float
     worst: float
@@ -109,7 +127,11 @@ def measure(
         sequence: the pulse on paper, if there is one.
     """
     played = pulse.played
-    nominal, mean, worst = box_infidelity(*played, job)
+    figures = group_infidelities(*played, job)
+    nominal, mean, worst = together(figures, job)
+    bounds: list[float | None] = [None] * len(figures)
+    if job.has_tolerance:
+        bounds = [proof.guaranteed for proof in prove_groups(pulse, job)]
     ideal = None if sequence is None else played_ideally(sequence, job)
     on_paper = ideal or (pulse.drive, pulse.segment_durations)
     decays = job.t1 is not None or job.t2 is not None
@@ -122,17 +144,17 @@ def measure(
         peak=pulse.peak,
         rms=pulse.rms,
         energy=pulse.energy,
+        groups=tuple(
+            GroupRow(f.name, f.nominal, f.mean, f.worst, bound)
+            for f, bound in zip(figures, bounds, strict=True)
+        ),
         nominal=nominal,
         mean=mean,
         worst=worst,
-        guaranteed=prove_pulse(pulse, job).guaranteed if job.has_tolerance else None,
+        guaranteed=max(bounds) if job.has_tolerance else None,
         ideal_worst=None if ideal is None else box_infidelity(*ideal, job)[2],
-        amplitude_windows=tuple(
-            tolerance_window(*played, job, "amplitude", limit) for limit in THRESHOLDS
-        ),
-        detuning_windows=tuple(
-            tolerance_window(*played, job, "detuning", limit) for limit in THRESHOLDS
-        ),
+        amplitude_windows=_windows(*played, job, "amplitude"),
+        detuning_windows=_windows(*played, job, "detuning"),
         amplitude_order=leading(*on_paper, job, "amplitude"),
         detuning_order=leading(*on_paper, job, "detuning"),
         levels=None if job.anharmonicity is None else _on_levels(*played, job),
@@ -140,8 +162,23 @@ def measure(
     )
 
 
+def _windows(drive: np.ndarray, durations: np.ndarray, job: Job, error: str) -> tuple[float, ...]:
+    """Below each threshold, the narrowest window of all qubits."""
+    qubits = [job.for_group(group) for group in job.groups]
+    return tuple(
+        min(tolerance_window(drive, durations, qubit, error, limit) for qubit in qubits)
+        for limit in THRESHOLDS
+    )
+
+
 def _on_levels(drive: np.ndarray, durations: np.ndarray, job: Job) -> OnLevels:
-    nominal, leakage = on_levels(drive, durations, job)
-    grid = error_grid(job, _LEVEL_POINTS, _LEVEL_POINTS)
-    over_box = level_infidelity(drive, durations, job, grid.eps, grid.delta)
-    return OnLevels(nominal, max(nominal, float(np.max(over_box))), leakage)
+    """The largest of each figure over the qubits; all have the job's anharmonicity."""
+    found = []
+    for qubit in map(job.for_group, job.groups):
+        nominal, leakage = on_levels(drive, durations, qubit)
+        grid = dense_grid(
+            qubit, (_LEVEL_POINTS, _LEVEL_POINTS), _LEVEL_DENSITY, float(np.sum(durations))
+        )
+        over_box = level_infidelity(drive, durations, qubit, grid.eps, grid.delta)
+        found.append((nominal, max(nominal, float(np.max(over_box))), leakage))
+    return OnLevels(*(max(column) for column in zip(*found, strict=True)))

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 
 from shaper.bench import score_grid
@@ -12,6 +14,23 @@ from shaper.pulse import Pulse, Score
 from shaper.target import infidelity
 
 
+@dataclass(frozen=True)
+class GroupFigures:
+    """What a pulse does to one of the job's qubits, against that qubit's own target.
+
+    Attributes:
+        name: of the qubit.
+        nominal: infidelity without errors.
+        mean: infidelity over its tolerance box.
+        worst: largest infidelity on the grid over its box, the nominal point among them.
+    """
+
+    name: str
+    nominal: float
+    mean: float
+    worst: float
+
+
 def score(pulse: Pulse, job: Job) -> Score:
     """Infidelity of a pulse against the job's target: nominal, and over the tolerance box.
 
@@ -20,9 +39,12 @@ def score(pulse: Pulse, job: Job) -> Score:
     integer codes make of it. Without a tolerance all three figures are one; with one, the codes'
     worst case is also bounded for every point of the box (``evidence.proof``).
 
+    Where the job has several qubits, nominal, worst and bound are the largest of theirs, the
+    mean is their mean by weight.
+
     Args:
         pulse: shaped or composite, on the sample grid.
-        job: target, detuning and tolerance box.
+        job: target, detuning and tolerance box, of all its qubits.
     """
     floats = box_infidelity(pulse.drive, pulse.segment_durations, job)
     codes = box_infidelity(*pulse.played, job)
@@ -35,11 +57,32 @@ def box_infidelity(
 ) -> tuple[float, float, float]:
     """Nominal, mean and worst infidelity of segments ``drive`` [n, 2] rad/s, ``durations`` [n] s.
 
-    The worst is the largest on the grid, the nominal point among them.
+    Of all qubits of the job together, as in ``score``.
     """
-    nominal = float(infidelity(propagate(drive, durations, 0.0, job.detuning), job.target))
-    if not job.has_tolerance:
-        return nominal, nominal, nominal
-    grid = score_grid(job)
-    over_box = infidelity(propagate(drive, durations, grid.eps, grid.delta), job.target)
-    return nominal, float(grid.weight @ over_box), max(nominal, float(np.max(over_box)))
+    return together(group_infidelities(drive, durations, job), job)
+
+
+def together(figures: tuple[GroupFigures, ...], job: Job) -> tuple[float, float, float]:
+    """Nominal (largest), mean (by weight) and worst (largest) of all qubits of the job."""
+    weights = [group.weight for group in job.groups]
+    return (
+        max(f.nominal for f in figures),
+        float(np.average([f.mean for f in figures], weights=weights)),
+        max(f.worst for f in figures),
+    )
+
+
+def group_infidelities(
+    drive: np.ndarray, durations: np.ndarray, job: Job
+) -> tuple[GroupFigures, ...]:
+    """The figures of every qubit of the job, the addressed one first; arguments as above."""
+    found = []
+    for group in job.groups:
+        q = propagate(drive, durations, 0.0, group.detuning)
+        nominal = mean = worst = float(infidelity(q, group.target))
+        if group.has_tolerance:
+            grid = score_grid(job.for_group(group), float(np.sum(durations)))
+            over_box = infidelity(propagate(drive, durations, grid.eps, grid.delta), group.target)
+            mean, worst = float(grid.weight @ over_box), max(nominal, float(np.max(over_box)))
+        found.append(GroupFigures(group.name, nominal, mean, worst))
+    return tuple(found)

@@ -1,7 +1,7 @@
 """Which pulse to play on this bench, and what would have to change for another answer.
 
 The measure is the worst infidelity over the tolerance box plus what T1 and T2 take in the pulse's
-time, so that a long robust pulse pays for its length.
+time, so that a long robust pulse pays for its length. Of several qubits the worst one counts.
 """
 
 from __future__ import annotations
@@ -14,7 +14,7 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.optimize import brentq
 
-from shaper.bench import error_grid
+from shaper.bench import Grid, dense_grid
 from shaper.evidence.levels import level_infidelity
 from shaper.evidence.row import Row
 from shaper.job import Job
@@ -26,8 +26,9 @@ from shaper.target import infidelity
 
 NEGLIGIBLE = 1e-9  # infidelity that no bench can tell from zero: such pulses are level
 _LEVEL = 1.01  # a factor too small to speak of
-_SCAN_POINTS = 15  # per side of the box while its size is varied
+_SCAN_POINTS = 15  # per side of the box, at least, while its size is varied
 _LEVEL_SCAN_POINTS = 5  # the same on three levels
+_SCAN_DENSITY = 2.0  # points per rad of reach
 _SCALES = np.geomspace(1 / 32, 32, 41)  # sizes of the box tried, in tolerances of the job
 _LARGEST_AMPLITUDE = 0.5  # relative; no bench is worse
 _BISECTIONS = 20  # of the size at which the answer changes
@@ -144,23 +145,19 @@ def _changes_with_box(
 ) -> tuple[Change | None, Change | None]:
     """The nearest sizes of the tolerance box to either side at which another pulse wins."""
     box = assumed_box(job)
+    qubits = [box.for_group(group) for group in box.groups]
     points = _SCAN_POINTS if job.anharmonicity is None else _LEVEL_SCAN_POINTS
-    grid = error_grid(box, points, points)
+    longest = max(row.duration for row in rows)
+    grids = [dense_grid(qubit, (points, points), _SCAN_DENSITY, longest) for qubit in qubits]
     played = {row.name: pulses[row.name].played for row in rows}
+    corners = [_corners(grid) for grid in grids]
+    everywhere = [slice(None)] * len(grids)
 
-    corners = np.flatnonzero(
-        (np.abs(grid.eps) == np.max(np.abs(grid.eps)))
-        & (np.abs(grid.delta - job.detuning) == np.max(np.abs(grid.delta - job.detuning)))
-    )
-
-    def cost(row: Row, scale: float, points: np.ndarray | slice) -> tuple[float, float]:
-        eps, delta = scale * grid.eps[points], scale * (grid.delta[points] - job.detuning)
-        if job.anharmonicity is None:
-            q = propagate(*played[row.name], eps, job.detuning + delta)
-            worst = float(np.max(infidelity(q, job.target)))
-        else:
-            errors = level_infidelity(*played[row.name], job, eps, job.detuning + delta)
-            worst = float(np.max(errors))
+    def cost(row: Row, scale: float, where: list) -> tuple[float, float]:
+        worst = max(
+            _scaled_worst(played[row.name], qubit, grid, scale, points)
+            for qubit, grid, points in zip(qubits, grids, where, strict=True)
+        )
         return _cost(worst + (row.coherence or 0.0), row.duration)
 
     def best(scale: float) -> str:
@@ -170,12 +167,13 @@ def _changes_with_box(
         for bound, k in bounds:
             if bound >= found:
                 break
-            whole = cost(rows[k], scale, slice(None))
+            whole = cost(rows[k], scale, everywhere)
             if whole < found:
                 found, name = whole, rows[k].name
         return name
 
-    upper = _SCALES[_SCALES * box.amplitude_tolerance <= _LARGEST_AMPLITUDE]
+    widest = max(qubit.amplitude_tolerance for qubit in qubits)
+    upper = _SCALES[_SCALES * widest <= _LARGEST_AMPLITUDE]
     if not job.has_tolerance:  # from no errors at all
         return None, _first_change(best, winner.name, upper, 0.5 * upper[0])
     larger = _first_change(best, winner.name, upper[upper > 1], 1.0)
@@ -183,13 +181,35 @@ def _changes_with_box(
     return smaller, larger
 
 
+def _corners(grid: Grid) -> np.ndarray:
+    """[corner] indices of the grid's extreme points."""
+    on_edge = [side == end for side in (grid.eps, grid.delta) for end in (side.min(), side.max())]
+    return np.flatnonzero((on_edge[0] | on_edge[1]) & (on_edge[2] | on_edge[3]))
+
+
+def _scaled_worst(
+    played: tuple, qubit: Job, grid: Grid, scale: float, points: np.ndarray | slice
+) -> float:
+    """Largest infidelity of one qubit at these points of its grid, the box scaled."""
+    eps = scale * grid.eps[points]
+    delta = qubit.detuning + scale * (grid.delta[points] - qubit.detuning)
+    if qubit.anharmonicity is None:
+        found = infidelity(propagate(*played, eps, delta), qubit.target)
+    else:
+        found = level_infidelity(*played, qubit, eps, delta)
+    return float(np.max(found))
+
+
 def assumed_box(job: Job) -> Job:
     """The job with its tolerance, or, without one, with one percent of both errors to scale."""
     if job.has_tolerance:
         return job
-    return dataclasses.replace(
-        job, amplitude_tolerance=_NO_TOLERANCE, detuning_tolerance=_NO_TOLERANCE * job.rabi_max
-    )
+    sides = {
+        "amplitude_tolerance": _NO_TOLERANCE,
+        "detuning_tolerance": _NO_TOLERANCE * job.rabi_max,
+    }
+    others = tuple(dataclasses.replace(group, **sides) for group in job.others)
+    return dataclasses.replace(job, others=others, **sides)
 
 
 def _first_change(
@@ -248,6 +268,9 @@ def _figures(row: Row, job: Job) -> str:
     """Total, its parts, and the duration of one pulse in words."""
     kind = "worst over the box" if job.has_tolerance else "without errors"
     said = f"{row.worst_known:.2e} {kind}"
+    if len(row.groups) > 1:
+        worst = max(row.groups, key=lambda group: group.worst)
+        said += f" ({worst.name} is worst)" if row.levels is None else ""
     if row.levels is not None:
         said += " on three levels"
     if row.coherence is not None:
@@ -258,6 +281,8 @@ def _figures(row: Row, job: Job) -> str:
 def _box(job: Job, scale: float) -> str:
     """A scaled tolerance box in words."""
     box = assumed_box(job)
+    if job.has_tolerance and job.others:
+        return f"{scale:.2g} times their tolerances"
     sides = []
     if box.amplitude_tolerance:
         sides.append(f"+-{100 * scale * box.amplitude_tolerance:.2g} % in amplitude")

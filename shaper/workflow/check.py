@@ -105,11 +105,16 @@ def frame_update(job: Job) -> str | None:
     """Whether shifting the phase of all later pulses does the job: "enough", "instead" or None.
 
     "enough": the target as stated needs no pulse at all. "instead": a z rotation whose pulse a
-    frame update could replace, unless the rotation must be physical. None: neither.
+    frame update could replace, unless the rotation must be physical. None: neither. Of several
+    qubits each has its own frame, and all have to be served.
     """
-    if job.target.needs_no_pulse:
+    targets = [group.target for group in job.groups]
+    if all(target.needs_no_pulse for target in targets):
         return "enough"
-    if job.target.kind == "gate" and job.target.z_angle is not None:
+    if all(
+        target.needs_no_pulse or (target.kind == "gate" and target.z_angle is not None)
+        for target in targets
+    ):
         return "instead"
     return None
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -14,14 +15,14 @@ from shaper.evidence.row import Row, measure
 from shaper.evidence.tables import cut_table, map_table, plain, waveform_table
 from shaper.evidence.verdict import Change, Verdict, judge, sentence
 from shaper.job import Job, parse_job
+from shaper.job.record import Group
 from shaper.pulse import Pulse, Waveform
 from shaper.units import MHZ, NS, US
 from shaper.workflow.check import frame_update
 
 _CUT_POINTS = 121
 _MAP_POINTS = 81
-_MOST_MAPS = 6  # beyond that a picture becomes a wall
-_MOST_DRAWN = 6  # waveforms and cuts in one picture
+_MOST_SHOWN = 6  # waveforms, cuts or maps in one picture: beyond that it becomes a wall
 _BEYOND = 2.0  # cuts reach this many tolerances to either side
 _CUT_AMPLITUDE = 0.1  # relative; how far the cut reaches where the job names no tolerance
 _CUT_DETUNING = 0.1  # of the largest Rabi rate, likewise
@@ -33,7 +34,8 @@ class Comparison:
 
     Attributes:
         job: what was asked.
-        shortest: s. Time-optimal (circle) or best known (box) duration for this target.
+        shortest: s. Time-optimal (circle) or best known (box) duration for this target, of the
+            addressed qubit alone.
         pulses: by name, in the order of the rows: those of the file, then those of the library.
         rows: one a pulse.
         verdict: who wins, and where the answer changes.
@@ -83,13 +85,16 @@ def _same(a: Pulse, b: Pulse) -> bool:
     return a.full_scale == b.full_scale and np.array_equal(a.codes, b.codes)
 
 
-def cuts(comparison: Comparison) -> dict:
+def cuts(comparison: Comparison, group: Group | None = None) -> dict:
     """Infidelity against detuning and against amplitude, see ``evidence.tables.cut_table``.
 
     The cuts reach twice the tolerance; where there is none, 10 % in amplitude and 10 % of the
     largest Rabi rate in detuning.
+
+    Args:
+        group: whose; default: the addressed qubit's. Detunings count from its own.
     """
-    job = comparison.job
+    job = comparison.job if group is None else comparison.job.for_group(group)
     side = np.linspace(-1, 1, _CUT_POINTS)
     amplitude, detuning = _reach(job)
     return cut_table(comparison.pulses, job.target, amplitude * side, detuning * side, job.detuning)
@@ -103,32 +108,37 @@ def _reach(job: Job) -> tuple[float, float]:
     )
 
 
-def maps(comparison: Comparison, names: Sequence[str] | None = None) -> dict:
+def maps(
+    comparison: Comparison, names: Sequence[str] | None = None, group: Group | None = None
+) -> dict:
     """Infidelity over both errors, see ``evidence.tables.map_table``; reach as of the cuts.
 
     Args:
-        names: which pulses; default: the shaped ones, the verdict's two, the baseline and the
-            most robust others, six in all.
+        names: which pulses; default: those ``worth_showing``.
+        group: whose; default: the addressed qubit's.
     """
-    job = comparison.job
+    job = comparison.job if group is None else comparison.job.for_group(group)
     side = np.linspace(-1, 1, _MAP_POINTS)
     amplitude, detuning = _reach(job)
-    shown = {name: comparison.pulses[name] for name in names or _worth_a_map(comparison)}
+    shown = {name: comparison.pulses[name] for name in names or worth_showing(comparison)}
     return map_table(shown, job.target, amplitude * side, detuning * side, job.detuning)
 
 
-def _worth_a_map(comparison: Comparison) -> list[str]:
+def worth_showing(comparison: Comparison) -> list[str]:
     """Shaped pulses, the verdict's two, the baseline, then the most robust others; six at most."""
     rows, verdict = comparison.rows, comparison.verdict
     chosen = [row.name for row in rows if row.origin == "optimized"][:2]
     chosen += [row.name for row in (verdict.winner, verdict.rival) if row is not None]
     chosen += [row.name for row in rows if row.name in ("sandwich", "plain")][:1]
     chosen += [row.name for row in sorted(rows, key=lambda row: row.worst_known)]
-    return list(dict.fromkeys(chosen))[:_MOST_MAPS]
+    return list(dict.fromkeys(chosen))[:_MOST_SHOWN]
 
 
 def as_json(comparison: Comparison) -> dict:
-    """The comparison as plain data, unit in every key; nan as None."""
+    """The comparison as plain data, unit in every key; nan as None.
+
+    ``other_qubits`` has what the top level says of the addressed one.
+    """
     job = comparison.job
     return plain(
         {
@@ -137,16 +147,31 @@ def as_json(comparison: Comparison) -> dict:
             "bound": job.bound,
             "rabi_max_MHz": job.rabi_max / MHZ,
             "shortest_ns": comparison.shortest / NS,
-            "tolerance": {
-                "amplitude": job.amplitude_tolerance,
-                "detuning_MHz": job.detuning_tolerance / MHZ,
-            },
+            "tolerance": _tolerance_json(job.groups[0]),
+            "other_qubits": [
+                {
+                    "name": group.name,
+                    "target": group.target_name,
+                    "detuning_MHz": group.detuning / MHZ,
+                    "tolerance": _tolerance_json(group),
+                    "weight": group.weight,
+                    "cuts": cuts(comparison, group),
+                }
+                for group in job.others
+            ],
             "pulses": [_row_json(row) for row in comparison.rows],
             "frame_update": comparison.frame_update,
             "verdict": verdict_json(comparison.verdict, job),
             "cuts": cuts(comparison),
         }
     )
+
+
+def _tolerance_json(group: Group) -> dict:
+    return {
+        "amplitude": group.amplitude_tolerance,
+        "detuning_MHz": group.detuning_tolerance / MHZ,
+    }
 
 
 def _row_json(row: Row) -> dict:
@@ -167,6 +192,16 @@ def _row_json(row: Row) -> dict:
         "infidelity_mean": row.mean,
         "infidelity_worst": row.worst,
         "infidelity_guaranteed": row.guaranteed,
+        "qubits": [
+            {
+                "name": group.name,
+                "infidelity": group.nominal,
+                "infidelity_mean": group.mean,
+                "infidelity_worst": group.worst,
+                "infidelity_guaranteed": group.guaranteed,
+            }
+            for group in row.groups
+        ],
         "infidelity_worst_on_paper": row.ideal_worst,
         "infidelity_on_three_levels": row.levels and row.levels.nominal,
         "infidelity_worst_on_three_levels": row.levels and row.levels.worst,
@@ -199,11 +234,23 @@ def verdict_json(verdict: Verdict, job: Job) -> dict:
     }
 
 
-def draw(comparison: Comparison, path: str | Path) -> None:
-    """Waveforms and cuts as a picture; the file's suffix decides the format."""
-    from shaper.figures import save
+def draw(comparison: Comparison, path: str | Path) -> list[Path]:
+    """Waveforms and cuts as a picture; the file's suffix decides the format.
+
+    Returns:
+        The files written: one more, of cuts, for each further qubit, its name added to the file's.
+    """
+    from shaper.figures import cuts_figure, save
 
     save(picture(comparison), path)
+    written = [Path(path)]
+    names = worth_showing(comparison)
+    for group in comparison.job.others:
+        table = cuts(comparison, group)
+        table["pulses"] = {name: table["pulses"][name] for name in names}
+        written.append(_beside(path, group))
+        save(cuts_figure(table, **_box_in_MHz(group)), written[-1])
+    return written
 
 
 def picture(comparison: Comparison):
@@ -215,28 +262,40 @@ def picture(comparison: Comparison):
 
     job = comparison.job
     names = list(comparison.pulses)
-    if len(names) > _MOST_DRAWN:
-        names = _worth_a_map(comparison)
+    if len(names) > _MOST_SHOWN:
+        names = worth_showing(comparison)
     table = cuts(comparison)
     table["pulses"] = {name: table["pulses"][name] for name in names}
     return comparison_figure(
         {name: waveform_table(comparison.pulses[name]) for name in names},
         table,
         rabi_max_MHz=job.rabi_max / MHZ,
-        **_box_in_MHz(job),
+        **_box_in_MHz(job.groups[0]),
         title=job.title,
     )
 
 
-def draw_maps(comparison: Comparison, path: str | Path) -> None:
-    """The maps side by side on one scale as a picture."""
+def draw_maps(comparison: Comparison, path: str | Path) -> list[Path]:
+    """The maps side by side on one scale as a picture; files as in ``draw``, one a qubit."""
     from shaper.figures import map_figure, save
 
-    save(map_figure(maps(comparison), **_box_in_MHz(comparison.job)), path)
+    written = []
+    for group in comparison.job.groups:
+        written.append(Path(path) if not written else _beside(path, group))
+        save(map_figure(maps(comparison, group=group), **_box_in_MHz(group)), written[-1])
+    return written
 
 
-def _box_in_MHz(job: Job) -> dict[str, float]:
+def _beside(path: str | Path, group: Group) -> Path:
+    """The file for a further qubit: its name, as far as a file's name can hold it, added."""
+    path = Path(path)
+    return path.with_name(
+        f"{path.stem}-{re.sub(r'[^A-Za-z0-9_.-]+', '-', group.name)}{path.suffix}"
+    )
+
+
+def _box_in_MHz(group: Group) -> dict[str, float]:
     return {
-        "amplitude_tolerance": job.amplitude_tolerance,
-        "detuning_tolerance_MHz": job.detuning_tolerance / MHZ,
+        "amplitude_tolerance": group.amplitude_tolerance,
+        "detuning_tolerance_MHz": group.detuning_tolerance / MHZ,
     }
