@@ -122,9 +122,10 @@ def test_pictures_come_for_both_kinds_of_paper(page):
 def test_live_data_holds_what_the_codes_play():
     comparison = compare(make_case())
     data = json.loads(json.dumps(live_data(comparison)))
-    rows, scale = np.array(data["target"]["error_rows"]), data["target"]["scale"]
+    (qubit,) = data["qubits"]
+    rows, scale = np.array(qubit["error_rows"]), qubit["scale"]
     for stored in data["pulses"]:
-        q = propagate(np.array(stored["rates"]), stored["durations"], 0.03, data["detuning"])
+        q = propagate(np.array(stored["rates"]), stored["durations"], 0.03, qubit["detuning"])
         pulse = comparison.pulses[stored["name"]]
         here = infidelity(
             propagate(*pulse.played, 0.03, comparison.job.detuning), comparison.job.target
@@ -152,7 +153,7 @@ def test_every_kind_of_target_has_a_page(target, has_theta, without_pictures):
     data = live_data(comparison)
     assert (data["theta_slider"] is not None) == has_theta
     if has_theta:  # the job's own angle must be one the slider can stand at
-        steps = (data["target"]["z_angle_deg"] + 180) / data["theta_slider"]["step"]
+        steps = (data["z_angle_deg"] + 180) / data["theta_slider"]["step"]
         assert steps == pytest.approx(round(steps), abs=1e-6)
     parsed = Page(make_report(make_case(target=target)))
     assert any(a.get("id") == "live" for _, a in parsed.tags)

@@ -34,6 +34,11 @@ def add(commands):
         help="composite pulses of the library to set beside them: names, or all",
     )
     command.add_argument(
+        "--data",
+        metavar="DIR",
+        help="where the measured files that the job names lie (default: beside FILE.h5)",
+    )
+    command.add_argument(
         "--json", action="store_true", help="print the tables behind the page instead"
     )
     return command
@@ -49,10 +54,11 @@ def run(args) -> int:
 
     source = Path(args.file)
     waveform = load_waveform(source)
+    folder = source.parent if args.data is None else Path(args.data)
     if args.json:
-        print(json.dumps(report_json(waveform, args.against)))
+        print(json.dumps(report_json(waveform, args.against, folder)))
         return 0
-    page = make_report(waveform, source.name, args.against)
+    page = make_report(waveform, source.name, args.against, folder)
     if args.output == "-":
         sys.stdout.write(page)
         return 0

@@ -21,6 +21,14 @@ _FOURIER_TERMS = 2**20  # terms of the Fourier integral at a time: some ten mega
 _TURN_PER_POINT = math.radians(3)  # largest turn between two points of a drawn path
 
 
+Segments = tuple[np.ndarray, np.ndarray]  # drive [segment, 2] rad/s and durations [segment] s
+
+
+def _segments(pulse: Pulse | Segments) -> Segments:
+    """What acts on the qubit: of a pulse what its codes play, else as given."""
+    return pulse.played if isinstance(pulse, Pulse) else pulse
+
+
 def waveform_table(pulse: Pulse) -> dict:
     """What the DAC holds, in runs of equal codes.
 
@@ -43,7 +51,7 @@ def waveform_table(pulse: Pulse) -> dict:
 
 
 def cut_table(
-    pulses: Mapping[str, Pulse],
+    pulses: Mapping[str, Pulse | Segments],
     target: Target,
     amplitude_error: Sequence[float],
     detuning: Sequence[float],
@@ -52,7 +60,7 @@ def cut_table(
     """Infidelity of what the codes play along each error, the other one being zero.
 
     Args:
-        pulses: by name.
+        pulses: by name; behind a line as the segments that arrive at the qubit.
         target: what they should do.
         amplitude_error: [k] unitless, relative.
         detuning: [m] rad/s, counted from ``offset``.
@@ -64,7 +72,7 @@ def cut_table(
     eps, delta = np.asarray(amplitude_error, float), np.asarray(detuning, float)
     table = {"amplitude_error": eps, "detuning_MHz": delta / MHZ, "pulses": {}}
     for name, pulse in pulses.items():
-        drive, durations = pulse.played
+        drive, durations = _segments(pulse)
         table["pulses"][name] = {
             "against_amplitude": infidelity(propagate(drive, durations, eps, offset), target),
             "against_detuning": infidelity(
@@ -75,7 +83,7 @@ def cut_table(
 
 
 def map_table(
-    pulses: Mapping[str, Pulse],
+    pulses: Mapping[str, Pulse | Segments],
     target: Target,
     amplitude_error: Sequence[float],
     detuning: Sequence[float],
@@ -90,13 +98,13 @@ def map_table(
     e, d = np.meshgrid(eps, delta, indexing="ij")
     table = {"amplitude_error": eps, "detuning_MHz": delta / MHZ, "infidelity": {}}
     for name, pulse in pulses.items():
-        q = propagate(*pulse.played, e, offset + d)
+        q = propagate(*_segments(pulse), e, offset + d)
         table["infidelity"][name] = infidelity(q, target)
     return table
 
 
 def path_table(
-    pulses: Mapping[str, Pulse],
+    pulses: Mapping[str, Pulse | Segments],
     starts: Mapping[str, Sequence[float]],
     amplitude_error: float = 0.0,
     detuning: float = 0.0,
@@ -114,7 +122,7 @@ def path_table(
     """
     table: dict = {}
     for name, pulse in pulses.items():
-        drive, durations = pulse.played
+        drive, durations = _segments(pulse)
         rate = np.hypot(np.hypot(*drive.T) * (1 + amplitude_error), detuning)
         cut = np.maximum(1, np.ceil(rate * durations / _TURN_PER_POINT)).astype(int)
         fine_drive, fine = np.repeat(drive, cut, axis=0), np.repeat(durations / cut, cut)

@@ -98,7 +98,7 @@
     const [c, s] = [Math.cos(theta / 2), Math.sin(theta / 2)];
     // rows of the vector part of q * conj(z(theta))
     return {
-      scale: data.target.scale,
+      scale: data.qubits[0].scale,
       error_rows: [[0, c, -s, 0], [0, s, c, 0], [-s, 0, 0, c]],
     };
   }
@@ -195,6 +195,7 @@
   const theta = byId("theta"); // only there for z rotations with a sandwich
   const other = byId("other");
   const start = byId("start");
+  const qubit = byId("qubit"); // only there if the pulse acts on several
 
   function show(side, name, pulse, target, eps, delta) {
     const value = infidelity(propagator(pulse, eps, delta), target);
@@ -209,18 +210,19 @@
 
   function update() {
     const eps = Number(amplitude.value) / 100;
-    const delta = data.detuning + Number(detuning.value) * data.detuning_unit;
+    const addressed = data.qubits[qubit ? Number(qubit.value) : 0];
+    const delta = addressed.detuning + Number(detuning.value) * data.detuning_unit;
     const said = {
       amplitude: `${amplitude.value} %`,
       detuning: `${detuning.value} ${data.detuning_unit_name}`,
     };
     const second = data.pulses[Number(other.value)];
-    let [name, pulse, target] = [second.name, second, data.target];
+    let [name, pulse, target] = [second.name, second, addressed];
     if (theta) {
       const isSandwich = second.name === "sandwich";
-      theta.disabled = !isSandwich;
+      theta.disabled = !isSandwich || addressed !== data.qubits[0];
       said.theta = `${theta.value} degrees`;
-      if (isSandwich && Number(theta.value) !== data.target.z_angle_deg) {
+      if (!theta.disabled && Number(theta.value) !== data.z_angle_deg) {
         const angle = (Number(theta.value) * Math.PI) / 180;
         [name, pulse, target] = [`sandwich, z(${theta.value})`, sandwichPulse(angle), zTarget(angle)];
       }
@@ -229,17 +231,17 @@
       byId(`${id}-shown`).textContent = text.replace("-", "−");
       byId(id).setAttribute("aria-valuetext", text);
     }
-    show("first", data.pulses[0].name, data.pulses[0], data.target, eps, delta);
+    show("first", data.pulses[0].name, data.pulses[0], addressed, eps, delta);
     show("second", name, pulse, target, eps, delta);
   }
 
-  for (const control of [amplitude, detuning, theta, other, start]) {
+  for (const control of [amplitude, detuning, theta, other, start, qubit]) {
     if (control) control.addEventListener("input", update);
   }
   byId("reset").addEventListener("click", () => {
     amplitude.value = 0;
     detuning.value = 0;
-    if (theta) theta.value = data.target.z_angle_deg;
+    if (theta) theta.value = data.z_angle_deg;
     update();
   });
   byId("live").hidden = false;

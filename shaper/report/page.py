@@ -217,7 +217,7 @@ def _live(live: Mapping) -> str:
     sliders = [("amplitude", "Amplitude error", live["amplitude_slider"], 0.0)]
     sliders.append(("detuning", "Detuning", live["detuning_slider"], 0.0))
     if live["theta_slider"] is not None:
-        angle = live["target"]["z_angle_deg"]
+        angle = live["z_angle_deg"]
         sliders.append(("theta", "θ of the sandwich", live["theta_slider"], angle))
     controls = "".join(
         f'<div><label for="{name}"><span>{label}</span> <output id="{name}-shown" for="{name}">'
@@ -225,6 +225,15 @@ def _live(live: Mapping) -> str:
         f'max="{size["max"]!r}" step="{size["step"]!r}" value="{value!r}" autocomplete="off"></div>'
         for name, label, size, value in sliders
     )
+    qubits = "".join(
+        f'<option value="{k}">{escape(qubit["name"])}</option>'
+        for k, qubit in enumerate(live["qubits"])
+    )
+    if len(live["qubits"]) > 1:
+        controls += (
+            f'<div><label for="qubit">Qubit</label><select id="qubit" autocomplete="off">{qubits}'
+            "</select></div>"
+        )
     sides = "".join(_side(name) for name in ("first", "second"))
     return f"""<section id="live" class="screen-only" aria-labelledby="live-heading" hidden>
 <h2 id="live-heading">Try an error</h2>

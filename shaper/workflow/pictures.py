@@ -13,6 +13,7 @@ from shaper.job import Job
 from shaper.pulse import Table, Waveform
 from shaper.report import Picture
 from shaper.units import MHZ
+from shaper.wiring import arriving
 from shaper.workflow.compare import Comparison, cuts, maps
 
 START_STATES = {
@@ -47,7 +48,9 @@ def figure_tables(waveform: Waveform, comparison: Comparison) -> dict:
         "cuts": lines,
         "map": plane,
         "spectrum": tables.spectrum_table(both, frequency),
-        "discs": tables.path_table(both, starts, 0.0, job.detuning),
+        "discs": tables.path_table(
+            {name: arriving(job, pulse) for name, pulse in both.items()}, starts, 0.0, job.detuning
+        ),
         "history": history_table(waveform),
         "budget": budget_table(waveform),
     }

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Sequence
+from dataclasses import replace
 
 import numpy as np
 
@@ -10,10 +12,12 @@ from shaper import figures
 from shaper.drive.dac import largest_code
 from shaper.evidence import tables
 from shaper.evidence.verdict import sentence
+from shaper.job import Job, parse_job
 from shaper.pulse import Pulse, Waveform
 from shaper.readable import rate, time
 from shaper.report import Report, report_page
 from shaper.units import DEG, MHZ
+from shaper.wiring import arriving, path_of
 from shaper.workflow.check import check_job
 from shaper.workflow.compare import Comparison, as_json, compare
 from shaper.workflow.pictures import START_STATES, figure_tables, pictures
@@ -29,17 +33,23 @@ _CAUTIONS = (
 )
 
 
-def make_report(waveform: Waveform, name: str = "", against: Sequence[str] = ()) -> str:
+def make_report(
+    waveform: Waveform,
+    name: str = "",
+    against: Sequence[str] = (),
+    folder: str | os.PathLike = ".",
+) -> str:
     """The report of a waveform file as one HTML page.
 
     Args:
         waveform: as ``shaper.load_waveform`` gives it.
         name: of the file, for the heading where the job has no title.
         against: names of the composite library to set beside the file's own pulses, or "all".
+        folder: where the files that the job names lie.
     Raises:
-        InputError: if the job that the file carries is not valid.
+        InputError: if the job that the file carries is not valid, or a file it names is not there.
     """
-    comparison = compare(waveform, against)
+    comparison = _compared(waveform, against, folder)
     job = comparison.job
     numbers = as_json(comparison)
     facts = check_job(job)
@@ -64,15 +74,23 @@ def make_report(waveform: Waveform, name: str = "", against: Sequence[str] = ())
     )
 
 
-def report_json(waveform: Waveform, against: Sequence[str] = ()) -> dict:
+def report_json(
+    waveform: Waveform, against: Sequence[str] = (), folder: str | os.PathLike = "."
+) -> dict:
     """Everything the report shows, as plain data: comparison, figures' tables, live panel."""
-    comparison = compare(waveform, against)
+    comparison = _compared(waveform, against, folder)
     return {
         "comparison": as_json(comparison),
         "check": check_job(comparison.job),
         "figures": tables.plain(figure_tables(waveform, comparison)),
         "live": live_data(comparison),
     }
+
+
+def _compared(waveform: Waveform, against: Sequence[str], folder: str | os.PathLike) -> Comparison:
+    """The comparison, its job knowing where measured data lie."""
+    job = parse_job(waveform.job_text, "job in the file", folder)
+    return replace(compare(waveform, against), job=job)
 
 
 def _facts(comparison: Comparison, facts: dict) -> dict[str, str]:
@@ -111,8 +129,9 @@ def _verified(waveform: Waveform) -> dict[str, str]:
 def live_data(comparison: Comparison) -> dict:
     """What the script in the page computes from, SI inside, JSON-ready.
 
-    ``pulses`` as the codes play them (``rates`` [run][2] rad/s, ``durations`` [run] s), the target
-    as error rows and scale, the drive, start states, and the reach of each slider.
+    ``pulses`` as the codes arrive at the qubit (``rates`` [run][2] rad/s, ``durations`` [run] s,
+    line and mixer included where the job has them), the target
+    of each qubit as error rows and scale, the drive, start states, and the reach of each slider.
     """
     job = comparison.job
     target = job.target
@@ -124,35 +143,39 @@ def live_data(comparison: Comparison) -> dict:
     degrees = None if angle is None else float(f"{angle / DEG:.9g}")
     return tables.plain(
         {
-            "target": {
-                "error_rows": target.error_rows,
-                "scale": target.scale,
-                "z_angle_deg": degrees,
-            },
+            "qubits": [
+                {
+                    "name": group.name,
+                    "error_rows": group.target.error_rows,
+                    "scale": group.target.scale,
+                    "detuning": group.detuning,
+                }
+                for group in job.groups
+            ],
+            "z_angle_deg": degrees,
             "drive": {
                 "rabi_max": job.rabi_max,
                 "bound": job.bound,
                 "sample_rate": job.sample_rate,
                 "largest_code": largest_code(job.dac_bits),
             },
-            "detuning": job.detuning,
             "detuning_unit": unit,
             "detuning_unit_name": unit_name,
             "amplitude_slider": percent,
             "detuning_slider": _slider(reach / unit),
             "theta_slider": (
                 {"min": -180.0, "max": 180.0, "step": _theta_step(degrees)}
-                if degrees is not None and has_sandwich
+                if degrees is not None and has_sandwich and path_of(job).straight
                 else None
             ),
             "starts": [{"label": k, "bloch": v} for k, v in START_STATES.items()],
-            "pulses": [_played(name, pulse) for name, pulse in comparison.pulses.items()],
+            "pulses": [_arriving(job, name, pulse) for name, pulse in comparison.pulses.items()],
         }
     )
 
 
-def _played(name: str, pulse: Pulse) -> dict:
-    rates, durations = pulse.played
+def _arriving(job: Job, name: str, pulse: Pulse) -> dict:
+    rates, durations = arriving(job, pulse)
     return {"name": name, "rates": rates, "durations": durations}
 
 
