@@ -5,6 +5,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from scipy.linalg import expm
 from scipy.optimize import least_squares
 
 from shaper import rotation
@@ -96,6 +97,15 @@ def waveform(job, pulse):
         pulses={"shaped": pulse},
         scores={"shaped": score(pulse, job)},
     )
+
+
+def test_exponentials_are_scipys(rng):
+    for size, scale in ((2, 0.1), (2, 30.0), (3, 1.0), (9, 2.0)):
+        a = rng.normal(size=(5, size, size)) + 1j * rng.normal(size=(5, size, size))
+        h = scale * (a + a.conj().swapaxes(1, 2)) / 2
+        ours = independent.exponential(-1j * h - 0.01 * np.eye(size))
+        assert np.max(np.abs(ours - expm(-1j * h - 0.01 * np.eye(size)))) < 100 * CLOSE
+    assert np.array_equal(independent.exponential(np.zeros((2, 2))), np.eye(2))
 
 
 def test_second_opinion_agrees_on_a_qubit(rng):
