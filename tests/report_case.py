@@ -36,9 +36,22 @@ slice_ns = 1.0
 """
 
 
-def make_case(bound="circle", target='gate = "z"\nangle_deg = 90.0'):
+LINE_AND_NEIGHBOR = """
+[line]
+kind = "first_order"
+bandwidth_MHz = 60.0
+
+[[group]]
+name = "alder-2"
+offset_MHz = 12.0
+target = { gate = "identity", equivalence = "up_to_final_z" }
+"""
+
+
+def make_case(bound="circle", target='gate = "z"\nangle_deg = 90.0', more=""):
     """A wavy pulse that is no good, the sandwich, and BB1 for x(90) (Wimperis 1994)."""
     text = JOB.format(bound=bound).replace('gate = "z"\nangle_deg = 90.0', target)
+    text += more
     job = parse_job(text)
     slices = np.arange(job.slices)
     phase, size = 2.1 * np.sin(slices / 7) + slices / 11, 0.9 + 0.1 * np.cos(slices / 5)

@@ -6,7 +6,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 from browser import CHROMIUM, DRIVER, KEYS, browser
-from report_case import make_case
+from report_case import LINE_AND_NEIGHBOR, make_case
 
 from shaper.composite import place, sandwich
 from shaper.evidence.tables import path_table
@@ -17,6 +17,7 @@ from shaper.rotation import about_z, bloch_matrix
 from shaper.store import load_waveform, save_waveform
 from shaper.target import Target, infidelity
 from shaper.units import DEG, MHZ
+from shaper.wiring import arriving
 from shaper.workflow.pictures import START_STATES
 from shaper.workflow.report import make_report
 
@@ -87,6 +88,22 @@ def test_sliders_by_keyboard_show_what_python_computes(chromium, case, rng):
         assert shown[1] == pytest.approx(float(second), **SAME), (eps, delta, theta)
         seen.add((eps, delta, theta))
     assert len(seen) > SETTINGS * 0.9  # the keys did move the sliders
+
+
+def test_behind_a_line_the_panel_shows_what_arrives_at_each_qubit(chromium, tmp_path, rng):
+    case = make_case(more=LINE_AND_NEIGHBOR)
+    job = parse_job(case.job_text)
+    (tmp_path / "a.html").write_text(make_report(case), encoding="utf-8")
+    chromium.open(tmp_path / "a.html")
+    assert chromium.run("return document.getElementById('theta')") is None  # not through a line
+    drive, durations = arriving(job, case.pulses["shaped"])
+    assert len(drive) > job.slices
+    for index, group in enumerate(job.groups):
+        choose(chromium, "qubit", index)
+        eps = walk(chromium, rng, "amplitude") / 100
+        delta = group.detuning + walk(chromium, rng, "detuning") * MHZ
+        wanted = infidelity(propagate(drive, durations, eps, delta), group.target)
+        assert float(chromium.text("#first-digits")) == pytest.approx(float(wanted), **SAME)
 
 
 def test_the_panel_starts_with_the_pulses_of_the_file(chromium, case):
