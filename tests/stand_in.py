@@ -22,6 +22,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 MAX_TEXT = 1 << 20  # bytes of a message without its blocks
+CHUNK = 1 << 18  # bytes swapped at a time
 QUEUE = 32  # errors kept (the last one becomes -350)
 BLOCK_MARK = "\x01"  # where a block stood in the text of a message
 
@@ -364,7 +365,9 @@ class Generator:
             return ",".join(map(str, words)).encode()
         code = self._code()
         if code[1] == "h":
-            data = content if code[0] == ">" else swap(content)
+            data = content
+            if code[0] == "<":
+                data = swap(content) if len(content) <= CHUNK else SwappedLater(content)
         else:
             words = struct.unpack(f">{len(content) // 2}h", content)
             try:
@@ -372,13 +375,13 @@ class Generator:
             except struct.error:
                 raise ScpiError(-222, "Data out of range") from None
         if self.strikes("flip_answer") and data:
-            data = bytearray(data)
+            data = bytearray(b"".join(data) if isinstance(data, SwappedLater) else data)
             data[len(data) // 3] ^= 1
         if self.strikes("short_answer"):
             data = data[:-2]
         count = b"%d" % len(data)
         if self.strikes("cut_answer"):
-            data = memoryview(data)[: len(data) // 2]
+            data = data[: len(data) // 4 * 2]
         return b"#%d%s" % (len(count), count), data
 
     def catalog(self, match, values):
@@ -476,6 +479,23 @@ def trace_name(text) -> str:
 def swap(data) -> memoryview:
     """Every two bytes exchanged."""
     return memoryview(np.frombuffer(data, np.uint16).byteswap()).cast("B")
+
+
+class SwappedLater:
+    """A long trace in the other byte order, made piece by piece while it is sent."""
+
+    def __init__(self, data):
+        self.data = memoryview(data)
+
+    def __len__(self):
+        return len(self.data)
+
+    def __getitem__(self, part: slice):
+        return SwappedLater(self.data[part])
+
+    def __iter__(self):
+        for start in range(0, len(self), CHUNK):
+            yield swap(self.data[start : start + CHUNK])
 
 
 def split_outside_quotes(text: str, separator: str) -> list[str]:
@@ -605,7 +625,8 @@ class Session:
             await self.loop.sock_sendall(self.link, reply[0][: len(reply[0]) // 2])
             raise Closed
         for piece in reply:
-            await self.loop.sock_sendall(self.link, piece)
+            for part in piece if isinstance(piece, SwappedLater) else (piece,):
+                await self.loop.sock_sendall(self.link, part)
 
 
 async def serve(generator: Generator, listener: socket.socket):

@@ -46,7 +46,10 @@ class Link(Protocol):
         ...
 
     def read_block(self, seconds: float, limit: int) -> bytes | bytearray:
-        """One answer that is a definite-length block; its data, at most ``limit`` bytes."""
+        """One answer that is a definite-length block; its data, at most ``limit`` bytes.
+
+        They may be overwritten by the next block that is read.
+        """
         ...
 
     def idle(self) -> None:
@@ -135,6 +138,7 @@ class SocketLink(Reader):
         except (OSError, UnicodeError) as error:
             raise LinkError(f"{address}: cannot connect: {_reason(error)}") from error
         self._ahead = b""  # received, not yet asked for
+        self._space = bytearray()  # of the last long block; fresh memory for each costs time
 
     def send(self, seconds: float, *pieces: bytes) -> None:
         """See ``Link``. The deadline covers the whole message, however slow the peer takes it."""
@@ -163,7 +167,9 @@ class SocketLink(Reader):
         if count <= len(self._ahead):
             taken, self._ahead = self._ahead[:count], self._ahead[count:]
             return taken
-        data = bytearray(count)  # the count has been checked against a limit
+        data = self._space if count == len(self._space) else bytearray(count)
+        if count > LINE_LIMIT:
+            self._space = data
         view, filled = memoryview(data), len(self._ahead)
         view[:filled], self._ahead = self._ahead, b""
         with self._failures(f"reading {count} bytes"):
