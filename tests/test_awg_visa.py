@@ -13,6 +13,7 @@ from hypothesis.extra import numpy as hnp
 
 from shaper.awg.instrument import Instrument
 from shaper.awg.link import LinkError, SocketLink, open_link
+from shaper.awg.visa import VisaLink
 from shaper.errors import InputError
 
 LONG, SOON = 30.0, 0.3  # s
@@ -124,3 +125,56 @@ def test_default_transport_needs_no_visa():
         link = open_link(address, LONG)
         assert isinstance(link, SocketLink)
         link.close()
+
+
+class MarkedEnd:
+    """What VISA gives for GPIB, USB, VXI-11 and HiSLIP: messages with a mark at their end.
+
+    No such hardware is in the tests; this follows viRead: pieces with ``success_max_count_read``,
+    the last one with ``success``.
+    """
+
+    def __init__(self, generator, piece):
+        self.generator, self.piece, self.inbox = generator, piece, b""
+        self.visalib, self.session, self.timeout = self, None, 0
+
+    def write_raw(self, message):
+        taken = message[:1000]  # a backend may take less than it was given
+        self.unsent = getattr(self, "unsent", b"") + taken
+        if self.unsent.endswith(b"\n") and len(taken) == len(message):
+            plain, blocks = self.unsent[:-1], []
+            if b",#" in plain:
+                head, _, tail = plain.partition(b"#")
+                digits = int(tail[:1])
+                start, size = 1 + digits, int(tail[1 : 1 + digits])
+                blocks = [bytearray(tail[start : start + size])]
+                plain = head + stand_in.BLOCK_MARK.encode() + tail[start + size :]
+            reply = b"".join(self.generator.execute(plain.decode("latin-1"), blocks))
+            self.inbox = reply + b"\n" if reply else b""
+            self.unsent = b""
+        return len(taken)
+
+    def read(self, session, count):
+        from pyvisa.constants import StatusCode
+
+        size = min(count, self.piece)
+        data, self.inbox = self.inbox[:size], self.inbox[size:]
+        return data, StatusCode.success_max_count_read if self.inbox else StatusCode.success
+
+    def close(self):
+        pass
+
+
+@pytest.mark.parametrize("piece", [1000, 1 << 20])
+@pytest.mark.parametrize("layout", ["apart", "interleaved"])
+def test_links_that_mark_the_end_of_a_message(rng, monkeypatch, tmp_path, layout, piece):
+    pytest.importorskip("pyvisa")
+    generator = stand_in.Generator(on={1: True})
+
+    def opened(link):
+        link._resource = MarkedEnd(generator, piece)
+
+    monkeypatch.setattr(VisaLink, "_open", opened)
+    made = plan(rng, "A", "B", into=profile(data={"layout": layout}), samples=5000)
+    record = run_load(made, "USB0::1::2::3::INSTR", tmp_path / "r.load.json")
+    assert record["status"] == "done" and holds(generator, made) and not generator.on[1]
