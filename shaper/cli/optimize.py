@@ -24,6 +24,16 @@ def add(commands):
         metavar="FILE.h5",
         help="waveform file to write (default: the job's name with .h5, in this folder)",
     )
+    command.add_argument(
+        "--shortest",
+        action="store_true",
+        help="find the shortest duration that reaches stop_infidelity",
+    )
+    command.add_argument(
+        "--resume",
+        action="store_true",
+        help="go on from the checkpoint that an interrupted search left beside the output",
+    )
     command.add_argument("--json", action="store_true", help="print one JSON object")
     command.add_argument(
         "--figure", metavar="FILE", help="draw how the search went (.png, .svg, .pdf)"
@@ -33,22 +43,36 @@ def add(commands):
 
 def run(args) -> int:
     """Run it; returns the exit code."""
+    from dataclasses import replace
+
     from shaper.cli.progress import ProgressLine, patient_interrupt
+    from shaper.errors import InputError
     from shaper.job import read_job
 
     job = read_job(args.job)
+    if args.shortest and job.stop_infidelity is None:
+        raise InputError(f"{args.job}: --shortest needs search.stop_infidelity, got none")
+    job = replace(job, find_shortest=job.find_shortest or args.shortest)
+    if args.resume and job.find_shortest:
+        raise InputError("--resume: a search for the shortest duration begins anew each time")
     output = Path(args.output or Path(args.job).with_suffix(".h5").name)
     _require_writable(output)
+    from shaper.search.checkpoint import Checkpoint
     from shaper.store import save_waveform
+    from shaper.store.atomic import replace_file
     from shaper.workflow.optimize import optimize, reached
 
+    kept = output.with_name(output.name + ".checkpoint")
+    checkpoint = Checkpoint(kept, job, replace_file, args.resume)
     line = ProgressLine()
     with patient_interrupt() as asked_to_stop:
         try:
-            waveform = optimize(job, line, asked_to_stop)
+            waveform = optimize(job, line, asked_to_stop, checkpoint)
         finally:
             line.close()
         save_waveform(output, waveform)
+    if waveform.status != "interrupted":
+        checkpoint.discard()
     if args.figure:
         from shaper.workflow.optimize import draw
 
@@ -58,7 +82,8 @@ def run(args) -> int:
     if not args.json:
         print(f"\n{output}" + (f"\n{args.figure}" if args.figure else ""))
     if waveform.status == "interrupted":
-        print("shaper: interrupted: the best so far is in the file", file=sys.stderr)
+        note = "" if job.find_shortest else "; go on with --resume"
+        print(f"shaper: interrupted: the best so far is in {output}{note}", file=sys.stderr)
         return INTERRUPTED
     if not good:
         print(f"shaper: short of stop_infidelity = {job.stop_infidelity:g}", file=sys.stderr)

@@ -130,6 +130,7 @@ def search(
     checkpoint: Checkpoint | None = None,
     warm: Sequence[np.ndarray] = (),
     slices: int | None = None,
+    give_up: bool = False,
 ) -> Found:
     """The best waveform found for the job.
 
@@ -141,6 +142,8 @@ def search(
         warm: drives [slice, 2] in W_max, of any number of slices, to start from as well; they
             take the places of the last random starts.
         slices: length of the arrays, see ``make_problem``.
+        give_up: end as soon as ``stop_infidelity`` is out of reach by all appearances: the mean
+            over the box, which no worst case is below, stays above it.
     Returns:
         the winner and what became of every start. The same job gives the same result, bit for
         bit, on the same machine and library versions, resumed or not.
@@ -148,7 +151,7 @@ def search(
     prepare()
     parameters, names = starting_parameters(job, warm)
     padding = (slices or job.slices) - job.slices
-    run = _Run(job, np.pad(parameters, ((0, 0), (0, padding), (0, 0))), names)
+    run = _Run(job, np.pad(parameters, ((0, 0), (0, padding), (0, 0))), names, give_up)
     if checkpoint is not None:
         run.restore(checkpoint.load())
     progress, stop = progress or (lambda *_: None), stop or (lambda: False)
@@ -167,8 +170,8 @@ class _Run:
     All that ``advance`` changes is in ``snapshot``.
     """
 
-    def __init__(self, job: Job, parameters: np.ndarray, names: list[str]):
-        self.job, self.names, self.stages = job, names, stages(job)
+    def __init__(self, job: Job, parameters: np.ndarray, names: list[str], give_up: bool):
+        self.job, self.names, self.stages, self.give_up = job, names, stages(job), give_up
         self.parameters = parameters
         self.status = np.full(len(names), "step_limit", dtype="U12")
         self.best_score, self.best_start, self.best = np.inf, 0, parameters[0]
@@ -221,13 +224,16 @@ class _Run:
         self.parameters[self.chosen] = np.asarray(self.state.parameters)
         self.status[self.chosen] = np.where(self.idle >= STALL_CHUNKS, "stalled", "step_limit")
         self.status[self.chosen[~np.isfinite(np.asarray(self.state.cost))]] = "nonfinite"
-        order = np.argsort(self._remember(self.chosen, power))  # nan last
+        rank = self._remember(self.chosen, power)
+        order = np.argsort(rank)  # nan last
+        if self.give_up and power == 1 and not np.nanmin(rank) <= self.job.stop_infidelity:
+            order = order[:0]  # nobody goes on
         self.power_number += 1
-        if self.power_number < len(stage.powers) and not self.reached:
+        if self.power_number < len(stage.powers) and not self.reached and len(order):
             self._begin_power()
             return
         self.legs.append(Leg(self.chosen, np.exp(np.concatenate(self.costs)).T))
-        self._enter(self.stage_number + 1, self.chosen[order])
+        self._enter(self.stage_number + 1 if len(order) else len(self.stages), self.chosen[order])
 
     def _look_for_goal(self) -> None:
         """Whether the leader meets the goal, on the score's grid too."""

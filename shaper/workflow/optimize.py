@@ -6,11 +6,15 @@ from collections.abc import Callable
 
 import numpy as np
 
+from shaper.composite.limit import limit
 from shaper.composite.sandwich import sandwich
 from shaper.composite.sequence import place
 from shaper.job import Job, parse_job
 from shaper.pulse import Score, Table, Waveform, make_pulse
 from shaper.search import descent
+from shaper.search.checkpoint import Checkpoint
+from shaper.search.duration import Shortest, search_shortest
+from shaper.units import NS
 from shaper.workflow.assemble import assemble
 
 _LIBRARIES = ("jax", "optax", "numpy", "scipy", "h5py")
@@ -20,18 +24,26 @@ def optimize(
     job: Job,
     progress: descent.Progress | None = None,
     stop: Callable[[], bool] | None = None,
+    checkpoint: Checkpoint | None = None,
 ) -> Waveform:
     """Search for the job's waveform and set the analytic sandwich beside it.
 
     Args:
-        job: as ``read_job`` gives it.
+        job: as ``read_job`` gives it. If its duration is to be found, the shortest one is.
         progress: called as ``progress(stage, step, of, best infidelity)`` while it runs.
         stop: asked now and then; True ends the search with the best so far, status
             "interrupted".
+        checkpoint: where the search is kept, and taken up again; not for the shortest duration.
     Returns:
         the record of a waveform file, with pulses "shaped" and "sandwich".
     """
-    found = descent.search(job, progress, stop)
+    curve = {}
+    if job.find_shortest:
+        shortest = search_shortest(job, progress, stop)
+        job, found = shortest.job, shortest.found
+        curve = _curve(shortest)
+    else:
+        found = descent.search(job, progress, stop, checkpoint=checkpoint)
     shaped = make_pulse(
         found.drive,
         np.full(job.slices, job.samples_per_slice),
@@ -47,7 +59,7 @@ def optimize(
         pulses,
         found.status,
         _LIBRARIES,
-        history=_history(found),
+        history=_history(found) | curve,
         history_attrs={
             "stages": " ".join(found.history),
             "best_start": found.best,
@@ -86,10 +98,34 @@ def _history(found: descent.Found) -> dict[str, Table]:
     }
 
 
-def draw(waveform: Waveform, path) -> None:
-    """How the search went, as a picture; the file's suffix decides the format."""
-    from shaper.figures import history_figure, save
+def _curve(shortest: Shortest) -> dict[str, Table]:
+    """Best infidelity against duration, as far as the search for the shortest came."""
+    durations = shortest.slices * shortest.job.slice_duration
+    return {
+        "duration_s": Table(durations, ("duration_s",), "s", "duration tried"),
+        "best_infidelity": Table(
+            shortest.infidelity, ("duration_s",), "1", "best infidelity found at this duration"
+        ),
+    }
 
+
+def draw(waveform: Waveform, path) -> None:
+    """How the search went, as a picture; the file's suffix decides the format.
+
+    Where the shortest duration was looked for: best infidelity against duration; else infidelity
+    against iteration.
+    """
+    from shaper.figures import duration_figure, history_figure, save
+
+    job = parse_job(waveform.job_text)
     tables = {name: table.values for name, table in waveform.history.items()}
-    goal = parse_job(waveform.job_text).stop_infidelity
-    save(history_figure(tables, stop_infidelity=goal), path)
+    if "best_infidelity" in tables:
+        curve = {
+            "duration_ns": tables["duration_s"] / NS,
+            "infidelity": tables["best_infidelity"],
+        }
+        limit_ns = limit(job.target, job.bound) / job.rabi_max / NS
+        figure = duration_figure(curve, limit_ns=limit_ns, stop_infidelity=job.stop_infidelity)
+    else:
+        figure = history_figure(tables, stop_infidelity=job.stop_infidelity)
+    save(figure, path)
