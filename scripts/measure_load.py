@@ -15,11 +15,12 @@ import numpy as np
 
 from shaper.awg.plan import Choice, make_plan
 from shaper.awg.profile import read_profile
+from shaper.drive.dac import padded_length
 from shaper.pulse import make_pulse
 from shaper.workflow.load import load_into_instrument
 
 ROOT = Path(__file__).resolve().parents[1]
-RUNS = 7
+RUNS = 11
 samples = int(sys.argv[1]) if len(sys.argv) > 1 else 1_000_000
 
 BARE_PEER = """
@@ -58,6 +59,38 @@ def bare(port: int, message: bytes) -> float:
     return seconds
 
 
+def measured(layout: str, ports: tuple[int, int], folder: str) -> list[tuple[float, float, float]]:
+    """Seconds of each run: bare, transfer and read back, whole load."""
+    data = profile.data.model_copy(update={"layout": layout})
+    choice = Choice("LONG", pulse, "circle", 0.0, "-", "0" * 64, "long", "-", 0.0)
+    plan = make_plan([choice], profile.model_copy(update={"data": data}))
+    message, rows = b"".join(trace.data for trace in plan.traces), []
+    for run in range(RUNS):
+        alone = bare(ports[0], message)
+        begin = time.perf_counter()
+        path = f"{folder}/{layout}-{run}.load.json"
+        record = load_into_instrument(plan, f"127.0.0.1:{ports[1]}", path, replace=True)
+        whole = time.perf_counter() - begin
+        moved = sum(
+            line["seconds"]
+            for line in record["lines"]
+            if line["step"] in ("transfer", "read back") and "LONG" in line["sent"]
+        )
+        rows.append((alone, moved, whole))
+    return rows
+
+
+def show(layout: str, rows: list[tuple[float, float, float]]) -> None:
+    """Medians, and medians of the ratios of the same run."""
+    print(f"{samples} samples of I and Q, {layout}, there and back, median of {RUNS} runs")
+    names = ("bare sendall and recv", "transfer and read back", "whole load, record and all")
+    for name, column in zip(names, zip(*rows, strict=True), strict=True):
+        seconds = statistics.median(column)
+        print(f"  {name:28} {1e3 * seconds:8.2f} ms  {8e-6 * samples / seconds:8.1f} MB/s")
+    ratios = [statistics.median(alone / row[k] for alone, *row in rows) for k in (0, 1)]
+    print(f"  throughput against bare: transfer {ratios[0]:.2f}, whole load {ratios[1]:.2f}")
+
+
 profile, _ = read_profile(ROOT / "configs" / "instruments" / "alder_awg.toml")
 turns = np.linspace(0, 200 * np.pi, samples)
 drive = 1e8 * np.stack([np.cos(turns), np.sin(turns)], axis=1)
@@ -65,36 +98,14 @@ pulse = make_pulse(
     drive, np.ones(samples), full_scale=1e8, bits=14, bound="circle", sample_rate=1e9,
     origin="composite",
 )  # fmt: skip
-plan = make_plan([Choice("LONG", pulse, "circle", 0.0, "-", "0" * 64, "long", "-", 0.0)], profile)
-message = b"".join(trace.data for trace in plan.traces)
 
-peer, port = started("-c", BARE_PEER, str(len(message)), str(RUNS))
+size = 4 * padded_length(samples + 41, 4, 16)  # with the marker's lead and hold
+peer, port = started("-c", BARE_PEER, str(size), str(2 * RUNS))
 stand_in, stand_in_port = started(str(ROOT / "scripts/stand_in_awg.py"), "--port", "0", "--quiet")
-rows = []
 try:
     with tempfile.TemporaryDirectory() as folder:
-        for run in range(RUNS):
-            alone = bare(port, message)
-            begin = time.perf_counter()
-            record = load_into_instrument(
-                plan, f"127.0.0.1:{stand_in_port}", f"{folder}/{run}.load.json", replace=True
-            )
-            whole = time.perf_counter() - begin
-            moved = sum(
-                line["seconds"]
-                for line in record["lines"]
-                if line["step"] in ("transfer", "read back") and "LONG" in line["sent"]
-            )
-            rows.append((alone, moved, whole))
+        for layout in ("apart", "interleaved"):
+            show(layout, measured(layout, (port, stand_in_port), folder))
 finally:
     peer.kill()
     stand_in.kill()
-
-megabytes = 2 * len(message) / 1e6  # there and back
-print(f"{samples} samples of I and Q, {megabytes / 2:.3f} MB each way, median of {RUNS} runs")
-names = ("bare sendall and recv", "transfer and read back", "whole load, record and all")
-for name, column in zip(names, zip(*rows, strict=True), strict=True):
-    seconds = statistics.median(column)
-    print(f"  {name:28} {1e3 * seconds:8.2f} ms  {megabytes / seconds:8.1f} MB/s")
-ratios = [statistics.median(alone / row[k] for alone, *row in rows) for k in (0, 1)]
-print(f"  throughput against bare: transfer {ratios[0]:.2f}, whole load {ratios[1]:.2f}")
