@@ -50,7 +50,9 @@ class Comparison:
     frame_update: str | None
 
 
-def compare(waveform: Waveform, against: Sequence[str] = ()) -> Comparison:
+def compare(
+    waveform: Waveform, against: Sequence[str] = (), folder: str | Path = "."
+) -> Comparison:
     """Measure every pulse of a waveform file anew, on one grid, from its codes.
 
     The figures stored in the file are not trusted: all are computed here, the guaranteed bound
@@ -60,10 +62,11 @@ def compare(waveform: Waveform, against: Sequence[str] = ()) -> Comparison:
         waveform: as ``shaper.load_waveform`` gives it.
         against: names of the composite library, or "all" of it. A pulse that the file holds
             already, by name or code by code, is not taken twice.
+        folder: where the files that the job names lie.
     Raises:
         InputError: if the job that the file carries is not valid, or the library has no such name.
     """
-    job = parse_job(waveform.job_text, "job in the file")
+    job = parse_job(waveform.job_text, "job in the file", folder)
     shortest = limit(job.target, job.bound) / job.rabi_max
     pulses = dict(waveform.pulses)
     sequences = {}

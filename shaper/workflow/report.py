@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import os
 from collections.abc import Sequence
-from dataclasses import replace
 
 import numpy as np
 
@@ -12,7 +11,7 @@ from shaper import figures
 from shaper.drive.dac import largest_code
 from shaper.evidence import tables
 from shaper.evidence.verdict import sentence
-from shaper.job import Job, parse_job
+from shaper.job import Job
 from shaper.pulse import Pulse, Waveform
 from shaper.readable import rate, time
 from shaper.report import Report, report_page
@@ -49,7 +48,7 @@ def make_report(
     Raises:
         InputError: if the job that the file carries is not valid, or a file it names is not there.
     """
-    comparison = _compared(waveform, against, folder)
+    comparison = compare(waveform, against, folder)
     job = comparison.job
     numbers = as_json(comparison)
     facts = check_job(job)
@@ -78,19 +77,13 @@ def report_json(
     waveform: Waveform, against: Sequence[str] = (), folder: str | os.PathLike = "."
 ) -> dict:
     """Everything the report shows, as plain data: comparison, figures' tables, live panel."""
-    comparison = _compared(waveform, against, folder)
+    comparison = compare(waveform, against, folder)
     return {
         "comparison": as_json(comparison),
         "check": check_job(comparison.job),
         "figures": tables.plain(figure_tables(waveform, comparison)),
         "live": live_data(comparison),
     }
-
-
-def _compared(waveform: Waveform, against: Sequence[str], folder: str | os.PathLike) -> Comparison:
-    """The comparison, its job knowing where measured data lie."""
-    job = parse_job(waveform.job_text, "job in the file", folder)
-    return replace(compare(waveform, against), job=job)
 
 
 def _facts(comparison: Comparison, facts: dict) -> dict[str, str]:
