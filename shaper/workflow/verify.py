@@ -8,12 +8,14 @@ from pathlib import Path
 
 import numpy as np
 
+from shaper.bench import points_for
 from shaper.drive import dac
 from shaper.drive.line import CHANGE_WHEN_DOUBLED, cells_needed
 from shaper.errors import InputError
 from shaper.evidence import independent
 from shaper.evidence.budget import SOURCES, Budget, Effects, error_budget
 from shaper.job import Job, parse_job
+from shaper.job.record import Group
 from shaper.physics.noise import read_spectrum
 from shaper.pulse import Pulse, Score, Table, Waveform
 from shaper.target import Target
@@ -23,8 +25,8 @@ RELATIVE = 0.01  # how far a claim may be off; grids differ, physics does not
 GRID = 2 * CHANGE_WHEN_DOUBLED  # infidelity; what two grids behind a line may differ by
 _HERTZ_SQUARED = (2 * np.pi) ** 2  # (rad/s)^2
 _CELLS_WITHOUT_LINE = 16  # per sample, where skew or an intermediate frequency turn within one
-_WORST_POINTS = 13  # per axis, evenly spaced, edges included
-_MEAN_POINTS = 9  # per axis, Gauss-Legendre
+_WORST_POINTS, _WORST_DENSITY = 13, 5.0  # per axis at least, and per rad of reach; evenly spaced
+_MEAN_POINTS, _MEAN_DENSITY = 9, 2.0  # the same, Gauss-Legendre
 
 
 @dataclass(frozen=True)
@@ -116,7 +118,7 @@ def verify(
         pulse = waveform.pulses[name]
         here = replace(effects, cells=_cells(pulse, effects))
         found[name] = Verification(
-            check_claims(pulse, waveform.scores[name], job.target, here),
+            check_claims(pulse, waveform.scores[name], job.target, here, job.others),
             error_budget(pulse, job.target, here),
         )
     return found
@@ -139,17 +141,18 @@ def _cells(pulse: Pulse, effects: Effects) -> int:
     return cells_needed(path.line, floats, 1 / pulse.sample_rate)
 
 
-def check_claims(pulse: Pulse, score: Score, target: Target, effects: Effects) -> tuple[Claim, ...]:
+def check_claims(
+    pulse: Pulse, score: Score, target: Target, effects: Effects, others: Sequence[Group] = ()
+) -> tuple[Claim, ...]:
     """Every stored infidelity of one pulse beside its recomputation, without decay.
 
     The figures are those of the model that the search had: behind the path that it saw, on the
-    levels that it saw.
+    levels that it saw, of the addressed qubit and the others together.
     """
     path = effects.path
     if effects.correction != "model":
         path = replace(path, line=None)
     floats = np.repeat(pulse.drive, pulse.samples, axis=0)
-    sides = (effects.amplitude_tolerance, effects.detuning_tolerance)
     claims = []
     for label, samples, claimed in (
         (
@@ -164,7 +167,7 @@ def check_claims(pulse: Pulse, score: Score, target: Target, effects: Effects) -
         ),
     ):
         drive, durations = _at_qubit(path, samples, pulse.sample_rate, effects.cells)
-        found = _figures(drive, durations, target, effects, sides)
+        found = _of_all(drive, durations, target, effects, others)
         for kind, stored, value in zip(("nominal", "mean", "worst"), claimed, found, strict=True):
             if not np.isnan(stored):
                 holds = _agree(stored, value, 0.0 if path.straight else GRID)
@@ -274,15 +277,34 @@ def _at_qubit(path, samples, sample_rate, cells):
     return samples[starts], np.diff(np.append(starts, len(samples))) / sample_rate
 
 
-def _figures(drive, durations, target, effects, sides) -> tuple[float, float, float]:
-    """Nominal, mean and worst infidelity by matrix exponentials."""
+def _of_all(drive, durations, target, effects, others) -> tuple[float, float, float]:
+    """Nominal, mean and worst of all qubits: the largest, the mean by weight, the largest."""
+    figures = [_figures(drive, durations, target, effects)]
+    for group in others:
+        here = replace(
+            effects,
+            detuning=group.detuning,
+            amplitude_tolerance=group.amplitude_tolerance,
+            detuning_tolerance=group.detuning_tolerance,
+        )
+        figures.append(_figures(drive, durations, group.target, here))
+    nominal, mean, worst = zip(*figures, strict=True)
+    weights = [1.0, *(group.weight for group in others)]
+    return max(nominal), float(np.average(mean, weights=weights)), max(worst)
 
+
+def _figures(drive, durations, target, effects) -> tuple[float, float, float]:
+    """Nominal, mean and worst infidelity of one qubit by matrix exponentials."""
+    sides = (effects.amplitude_tolerance, effects.detuning_tolerance)
+    speeds = (float(np.sum(np.hypot(*drive.T) * durations)), float(np.sum(durations)))
     ladder = (effects.levels, effects.anharmonicity) if effects.on_ladder else (2, 0.0)
     rules, even = [], []
-    for half in sides:
-        x, w = np.polynomial.legendre.leggauss(_MEAN_POINTS)
+    for half, speed in zip(sides, speeds, strict=True):
+        reach = half * speed  # rad
+        x, w = np.polynomial.legendre.leggauss(points_for(reach, _MEAN_POINTS, _MEAN_DENSITY))
         rules.append((half * x, w / 2) if half else (np.zeros(1), np.ones(1)))
-        even.append(np.linspace(-half, half, _WORST_POINTS) if half else np.zeros(1))
+        points = points_for(reach, _WORST_POINTS, _WORST_DENSITY)
+        even.append(np.linspace(-half, half, points) if half else np.zeros(1))
 
     def lost(axes):
         eps, delta = (v.ravel() for v in np.meshgrid(*axes, indexing="ij"))
