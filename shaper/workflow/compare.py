@@ -18,6 +18,7 @@ from shaper.job import Job, parse_job
 from shaper.job.record import Group
 from shaper.pulse import Pulse, Waveform
 from shaper.units import MHZ, NS, US
+from shaper.wiring import arriving
 from shaper.workflow.check import frame_update
 
 _CUT_POINTS = 121
@@ -100,7 +101,13 @@ def cuts(comparison: Comparison, group: Group | None = None) -> dict:
     job = comparison.job if group is None else comparison.job.for_group(group)
     side = np.linspace(-1, 1, _CUT_POINTS)
     amplitude, detuning = _reach(job)
-    return cut_table(comparison.pulses, job.target, amplitude * side, detuning * side, job.detuning)
+    pulses = _at_qubit(comparison, comparison.pulses)
+    return cut_table(pulses, job.target, amplitude * side, detuning * side, job.detuning)
+
+
+def _at_qubit(comparison: Comparison, names: Sequence[str]) -> dict:
+    """What arrives at the qubit of these pulses, for the tables."""
+    return {name: arriving(comparison.job, comparison.pulses[name]) for name in names}
 
 
 def _reach(job: Job) -> tuple[float, float]:
@@ -123,7 +130,7 @@ def maps(
     job = comparison.job if group is None else comparison.job.for_group(group)
     side = np.linspace(-1, 1, _MAP_POINTS)
     amplitude, detuning = _reach(job)
-    shown = {name: comparison.pulses[name] for name in names or worth_showing(comparison)}
+    shown = _at_qubit(comparison, names or worth_showing(comparison))
     return map_table(shown, job.target, amplitude * side, detuning * side, job.detuning)
 
 
