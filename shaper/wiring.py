@@ -13,7 +13,7 @@ from shaper.drive.line import Line
 from shaper.drive.mixer import Calibration
 from shaper.drive.path import Path
 from shaper.drive.polish import polish
-from shaper.errors import InputError
+from shaper.errors import InputError, SafetyError
 from shaper.job import Job
 from shaper.pulse import Pulse
 
@@ -36,17 +36,25 @@ def path_of(job: Job) -> Path:
     )
 
 
-def play(job: Job, drive: np.ndarray, samples: np.ndarray, origin: str, source: str = "") -> Pulse:
+def play(
+    job: Job,
+    drive: np.ndarray,
+    samples: np.ndarray,
+    origin: str,
+    source: str = "",
+    polished: bool = False,
+) -> Pulse:
     """A pulse of the job's bench from the drive that is wanted: what the DAC has to play for it.
 
     Predistorted where the job corrects by the inverse line, put on the intermediate frequency,
-    corrected for the mixer, held within the bound after all that, rounded, and polished where the
-    job says so. The pulse keeps the wanted drive beside the codes.
+    corrected for the mixer, held within the bound after all that, rounded. The pulse keeps the
+    wanted drive beside the codes.
 
     Args:
         drive: [segment, 2] rad/s, wanted at the mixer's output; with ``correction = "inverse"``
             at the qubit.
         samples: [segment] whole samples of each.
+        polished: whether the codes are searched once more, if the job says so.
     Raises:
         SafetyError: if the corrections lift the drive over the bound.
         InputError: if the job asks for a polish through a mixer or an intermediate frequency.
@@ -54,22 +62,47 @@ def play(job: Job, drive: np.ndarray, samples: np.ndarray, origin: str, source: 
     path = path_of(job)
     drive, samples = np.asarray(drive, dtype=float), np.asarray(samples, dtype=int)
     if path.line is not None and job.correction == "inverse":
-        extra = _settling(path.line, job)
         drive = np.concatenate([drive, np.zeros((1, 2))])
-        samples = np.append(samples, extra)
-        wanted = np.repeat(drive, samples, axis=0)
-        wanted = lines.inverse(path.line, wanted[:-extra], 1 / job.sample_rate, extra)
-    else:
-        wanted = np.repeat(drive, samples, axis=0)
-    played = path.to_play(wanted, job.sample_rate)
-    mixer.require_headroom(played, job.rabi_max, job.bound)
+        samples = np.append(samples, _settling(path.line, job))
+    played = _before_rounding(job, path, drive, samples)
+    if not path.straight:
+        mixer.require_headroom(played, job.rabi_max, job.bound)
     codes = dac.encode(played, job.rabi_max, job.dac_bits, job.bound)
-    if job.polish:
+    if polished and job.polish:
         codes = _polished(job, path, codes, played)
     return Pulse(origin, source, drive, samples, codes, job.rabi_max, job.dac_bits, job.sample_rate)
 
 
-def arriving(job: Job, pulse: Pulse, cells: int = 4) -> tuple[np.ndarray, np.ndarray]:
+def share_that_fits(job: Job, drive: np.ndarray, samples: np.ndarray) -> float:
+    """The largest share of this drive, in twentieths, that the corrections leave within the bound.
+
+    One where nothing is corrected. Arguments as of ``play``.
+    Raises:
+        SafetyError: if not even a tenth fits.
+    """
+    for twentieths in range(20, 1, -1):
+        try:
+            play(job, drive * twentieths / 20, samples, "trial")
+        except SafetyError as error:
+            refusal = error
+        else:
+            return twentieths / 20
+    raise refusal
+
+
+def _before_rounding(job: Job, path: Path, drive: np.ndarray, samples: np.ndarray) -> np.ndarray:
+    """[sample, 2] rad/s: what the DAC would play if it had no grain.
+
+    With the inverse line the last segment is the time in which the tail is cut short.
+    """
+    spread = np.repeat(drive, samples, axis=0)
+    if path.line is not None and job.correction == "inverse":
+        extra = int(samples[-1])
+        spread = lines.inverse(path.line, spread[:-extra], 1 / job.sample_rate, extra)
+    return path.to_play(spread, job.sample_rate)
+
+
+def arriving(job: Job, pulse: Pulse, cells: int = 8) -> tuple[np.ndarray, np.ndarray]:
     """What the codes of a pulse make at the qubit, through the whole path of the job.
 
     Args:
@@ -82,6 +115,16 @@ def arriving(job: Job, pulse: Pulse, cells: int = 4) -> tuple[np.ndarray, np.nda
         return pulse.played
     codes = dac.decode(pulse.codes, pulse.full_scale, pulse.bits)
     drive, cell = path.at_qubit(codes, pulse.sample_rate, cells)
+    return drive, np.full(len(drive), cell)
+
+
+def wanted(job: Job, pulse: Pulse, cells: int = 8) -> tuple[np.ndarray, np.ndarray]:
+    """What the pulse would make at the qubit if the DAC had no grain: as ``arriving``."""
+    path = path_of(job)
+    if path.straight:
+        return pulse.drive, pulse.segment_durations
+    played = _before_rounding(job, path, pulse.drive, pulse.samples)
+    drive, cell = path.at_qubit(played, pulse.sample_rate, cells)
     return drive, np.full(len(drive), cell)
 
 

@@ -20,7 +20,8 @@ FLOORS = (
     {"drive"},  # what stands between the numbers and the qubit
     {"job"},  # the job file
     {"bench", "pulse"},  # the job as numbers; the record that all later rooms speak of
-    {"wiring", "composite"},  # the pulse through the line; published sequences
+    {"wiring"},  # the pulse through mixer and line
+    {"composite"},  # published sequences
     {"search", "evidence"},  # looking for the waveform; judging it
     {"store", "figures"},  # files and pictures
     {"awg", "report"},  # the instrument; the page

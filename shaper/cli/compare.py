@@ -134,7 +134,9 @@ def _qubit_line(job, group) -> str:
 
     offset = group.detuning - job.detuning
     where = f"{rate(abs(offset), 6)} {'above' if offset >= 0 else 'below'} the addressed one"
-    return f"qubit      {group.name}, {where}: {group.target_name}; {_sides(group) or 'no tolerance'}"
+    return (
+        f"qubit      {group.name}, {where}: {group.target_name}; {_sides(group) or 'no tolerance'}"
+    )
 
 
 def _qubit_table(comparison) -> str:

@@ -14,8 +14,9 @@ import numpy as np
 
 from shaper.errors import InputError
 from shaper.job import Job
-from shaper.pulse import Pulse, make_pulse
+from shaper.pulse import Pulse
 from shaper.rotation import about_equator, in_time_order
+from shaper.wiring import play, share_that_fits
 
 _SAME_PHASE = 1e-12  # rad; neighboring arcs this close in phase are one arc
 _NO_ANGLE = 1e-13  # rad; an arc this short is none: it would cost a whole sample for nothing
@@ -141,33 +142,28 @@ def place(sequence: Sequence, job: Job) -> Pulse:
     Each arc is rounded up to whole samples and its amplitude lowered so that its angle stays
     exact; a uniform sequence stays uniform only as far as the samples allow. An arc longer than a
     whole number of samples by round-off only stays at that number and at the bound. A sequence
-    without arcs is one sample of zero drive.
+    without arcs is one sample of zero drive. Where the bench corrects mixer or line, the amplitude
+    is lowered until the corrections fit under the bound.
 
     Raises:
         InputError: if the pulse would be longer than ``MAX_SAMPLES``.
     """
     keep = sequence.angles > _NO_ANGLE
     angles, phases = sequence.angles[keep], sequence.phases[keep]
-    direction = np.stack([np.cos(phases), np.sin(phases)], axis=-1)  # [arc, 2]
     if len(angles) == 0:
-        samples, drive = np.ones(1, dtype=int), np.zeros((1, 2))
-    else:
-        ceiling = job.rabi_max * arc_rates(sequence, job.bound)[keep]  # [arc] rad/s
-        exact = angles / ceiling * job.sample_rate
+        return play(job, np.zeros((1, 2)), np.ones(1, dtype=int), "composite", sequence.source)
+    direction = np.stack([np.cos(phases), np.sin(phases)], axis=-1)  # [arc, 2]
+    ceiling = job.rabi_max * arc_rates(sequence, job.bound)[keep]  # [arc] rad/s
+
+    def on_grid(share: float) -> tuple[np.ndarray, np.ndarray]:
+        exact = angles / (share * ceiling) * job.sample_rate
         samples = np.maximum(np.ceil(exact * (1 - _SAMPLE_HAIR)), 1).astype(int)
         require_playable(sequence.name, int(np.sum(samples)))
         rate = np.minimum(angles * job.sample_rate / samples, ceiling)
-        drive = rate[:, None] * direction
-    return make_pulse(
-        drive,
-        samples,
-        full_scale=job.rabi_max,
-        bits=job.dac_bits,
-        bound=job.bound,
-        sample_rate=job.sample_rate,
-        origin="composite",
-        source=sequence.source,
-    )
+        return rate[:, None] * direction, samples
+
+    share = share_that_fits(job, *on_grid(1.0))
+    return play(job, *on_grid(share), "composite", sequence.source)
 
 
 def require_playable(name: str, samples: int) -> None:

@@ -50,6 +50,7 @@ from shaper.job import Job
 from shaper.physics.propagate import propagate
 from shaper.pulse import Pulse
 from shaper.target import Target
+from shaper.wiring import arriving
 
 MAX_BOXES = 10_000
 _REACH = 4.0  # A h or B h of one box: few points per unit of reach, and few boxes
@@ -95,7 +96,7 @@ def prove_groups(pulse: Pulse, job: Job, tolerance: float = 0.01) -> tuple[Proof
     """The proof for every qubit of the job, each over its own box, the addressed one first."""
     return tuple(
         prove(
-            *pulse.played,
+            *arriving(job, pulse),
             group.target,
             group.amplitude_tolerance,
             group.detuning_tolerance,

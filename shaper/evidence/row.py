@@ -17,6 +17,7 @@ from shaper.evidence.window import tolerance_window
 from shaper.job import Job
 from shaper.physics.decay import coherence_limit
 from shaper.pulse import Pulse
+from shaper.wiring import arriving
 
 _LEVEL_POINTS = 9  # per axis, at least: levels cost a hundred times what the qubit does
 _LEVEL_DENSITY = 2.0  # points per rad of reach
@@ -126,7 +127,7 @@ def measure(
         shortest: s. Limit of the duration for this target.
         sequence: the pulse on paper, if there is one.
     """
-    played = pulse.played
+    played = arriving(job, pulse)
     figures = group_infidelities(*played, job)
     nominal, mean, worst = together(figures, job)
     bounds: list[float | None] = [None] * len(figures)

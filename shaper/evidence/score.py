@@ -12,6 +12,7 @@ from shaper.job import Job
 from shaper.physics.propagate import propagate
 from shaper.pulse import Pulse, Score
 from shaper.target import infidelity
+from shaper.wiring import arriving, wanted
 
 
 @dataclass(frozen=True)
@@ -34,6 +35,8 @@ class GroupFigures:
 def score(pulse: Pulse, job: Job) -> Score:
     """Infidelity of a pulse against the job's target: nominal, and over the tolerance box.
 
+    Both go through all that stands between DAC and qubit (``wiring``).
+
     The box is sampled on ``bench.score_grid``, corners and edges included; the mean is exact for
     polynomials of the errors up to degree 79. Scored twice: the float waveform, and what the
     integer codes make of it. Without a tolerance all three figures are one; with one, the codes'
@@ -46,8 +49,8 @@ def score(pulse: Pulse, job: Job) -> Score:
         pulse: shaped or composite, on the sample grid.
         job: target, detuning and tolerance box, of all its qubits.
     """
-    floats = box_infidelity(pulse.drive, pulse.segment_durations, job)
-    codes = box_infidelity(*pulse.played, job)
+    floats = box_infidelity(*wanted(job, pulse), job)
+    codes = box_infidelity(*arriving(job, pulse), job)
     guaranteed = prove_pulse(pulse, job).guaranteed if job.has_tolerance else None
     return Score(*floats, *codes, guaranteed)
 

@@ -23,6 +23,7 @@ from shaper.physics.propagate import propagate
 from shaper.pulse import Pulse
 from shaper.readable import rate, time
 from shaper.target import infidelity
+from shaper.wiring import arriving
 
 NEGLIGIBLE = 1e-9  # infidelity that no bench can tell from zero: such pulses are level
 _LEVEL = 1.01  # a factor too small to speak of
@@ -149,7 +150,7 @@ def _changes_with_box(
     points = _SCAN_POINTS if job.anharmonicity is None else _LEVEL_SCAN_POINTS
     longest = max(row.duration for row in rows)
     grids = [dense_grid(qubit, (points, points), _SCAN_DENSITY, longest) for qubit in qubits]
-    played = {row.name: pulses[row.name].played for row in rows}
+    played = {row.name: arriving(job, pulses[row.name]) for row in rows}
     corners = [_corners(grid) for grid in grids]
     everywhere = [slice(None)] * len(grids)
 

@@ -15,6 +15,8 @@ from shaper.errors import InputError
 from shaper.job import Job
 
 INTERVAL = 30.0  # s between two checkpoints
+# what reading a zip archive of arrays raises if bytes of it are wrong
+_DAMAGED = (OSError, ValueError, EOFError, KeyError, NotImplementedError, zipfile.BadZipFile)
 
 
 class Checkpoint:
@@ -63,9 +65,9 @@ class Checkpoint:
         if not self.path.is_file():
             raise InputError(f"--resume: expected a checkpoint {self.path}, found none")
         try:
-            with np.load(self.path, allow_pickle=False) as file:
+            with np.load(io.BytesIO(self.path.read_bytes()), allow_pickle=False) as file:
                 kept = {name: file[name] for name in file.files}
-        except (OSError, ValueError, EOFError, zipfile.BadZipFile) as error:
+        except _DAMAGED as error:
             raise InputError(f"--resume: {self.path} is not a whole checkpoint: {error}") from error
         if str(kept.pop("job", "")) != self._job:
             raise InputError(f"--resume: {self.path} belongs to another job than the one given")

@@ -40,7 +40,8 @@ class Stage:
 
     Attributes:
         name: for the progress line.
-        points: of the Gauss-Lobatto grid along amplitude and detuning.
+        points: fewest of the Gauss-Lobatto grid along amplitude and detuning.
+        per_radian: points per rad of an error's reach, where that is more.
         kept: number of starts that take part, the best ones; all if None.
         powers: of the mean, one after the other.
         steps: for each power; the job's iterations if None.
@@ -48,14 +49,15 @@ class Stage:
 
     name: str
     points: tuple[int, int]
+    per_radian: float
     kept: int | None
     powers: tuple[float, ...]
     steps: int | None
 
 
-EXPLORE = Stage("exploring", (3, 5), None, (1.0,), None)
-REFINE = Stage("refining", (7, 11), 6, (1.0, 4.0, 16.0), 40)
-FINISH = Stage("finishing", (11, 15), 2, (64.0, 256.0), 40)
+EXPLORE = Stage("exploring", (3, 5), 1.5, None, (1.0,), None)
+REFINE = Stage("refining", (7, 11), 3.0, 6, (1.0, 4.0, 16.0), 40)
+FINISH = Stage("finishing", (11, 15), 4.0, 2, (64.0, 256.0), 40)
 LARGEST_JACOBIAN = 3e7  # doubles, all starts together; beyond it quasi-Newton steps are taken
 MEASURED = 8  # starts that are measured on the score's grid at the end
 
@@ -196,8 +198,9 @@ class _Run:
             self._begin_power()
 
     def _make_problem(self) -> None:
-        points = self.stages[self.stage_number].points
-        self.problem = make_problem(self.job, points, self.parameters.shape[1])
+        stage = self.stages[self.stage_number]
+        length = self.parameters.shape[1]
+        self.problem = make_problem(self.job, stage.points, length, stage.per_radian)
         self.method = method_for(self.problem, len(self.chosen))
 
     def _begin_power(self) -> None:

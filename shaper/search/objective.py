@@ -16,7 +16,7 @@ import jax
 import jax.numpy as jnp
 import numpy as np
 
-from shaper.bench import Grid, error_grid, line_taps, score_grid
+from shaper.bench import Grid, dense_grid, line_taps, score_grid
 from shaper.drive.bound import quadratures
 from shaper.drive.line import filtered
 from shaper.job import Job
@@ -25,7 +25,7 @@ from shaper.search import shape
 
 Array = jax.Array
 
-_TINY = 1e-300  # keeps the logarithm of a perfect pulse finite
+_TINY = 1e-60  # keeps the logarithm of a perfect pulse, and its slope, finite
 _SLOPE_REACH = 1e-3  # rad; how far the ends of a central difference lie from the center
 
 
@@ -74,20 +74,24 @@ class Problem:
 
 
 def make_problem(
-    job: Job, points: tuple[int, int] | None = None, slices: int | None = None
+    job: Job,
+    points: tuple[int, int] | None = None,
+    slices: int | None = None,
+    per_radian: float = 0.0,
 ) -> Problem:
     """The job on a grid of errors, all its qubits together.
 
     Args:
-        points: of the Gauss-Lobatto grid along amplitude and detuning; None: the grid on which
-            pulses are scored, without the qubits' weights and without wishes.
+        points: fewest of the Gauss-Lobatto grid along amplitude and detuning; None: the grid on
+            which pulses are scored, without the qubits' weights and without wishes.
         slices: length of the arrays, at least the job's own; the rest has no duration.
+        per_radian: points per rad of an error's reach, where that is more (``bench.points_for``).
     """
     scored = points is None
     if job.minimize == "first_order":
         parts = [_slopes(job, group) for group in job.groups]
     else:
-        parts = [_box(job, group, points) for group in job.groups]
+        parts = [_box(job, group, points, per_radian) for group in job.groups]
     grids, mixes = zip(*parts, strict=True)
     rows = [
         _rows(group, len(grid.eps), 1.0 if scored else group.weight)
@@ -115,9 +119,9 @@ def make_problem(
     )
 
 
-def _box(job: Job, group, points) -> tuple[Grid, None]:
+def _box(job: Job, group, points, per_radian: float) -> tuple[Grid, None]:
     alone = job.for_group(group)
-    return (score_grid(alone) if points is None else error_grid(alone, *points)), None
+    return (score_grid(alone) if points is None else dense_grid(alone, points, per_radian)), None
 
 
 def _slopes(job: Job, group) -> tuple[Grid, np.ndarray]:
@@ -222,7 +226,8 @@ def log_power_mean(infidelity: Array, weight: Array, power: Array | float) -> Ar
         [] unitless; between the log of the mean and the log of the maximum.
     """
     top = jnp.max(infidelity) + _TINY
-    return jnp.log(top) + jnp.log(jnp.sum(weight * (infidelity / top) ** power)) / power
+    mean = jnp.sum(weight * (infidelity / top) ** power)
+    return jnp.log(top) + jnp.log(mean + _TINY) / power
 
 
 def measure(problem: Problem, power: Array, parameters: Array) -> tuple[Array, Array]:

@@ -129,7 +129,13 @@ class _Reader(Access):
         """
         bound, rabi_max, drive = "", math.nan, {}
         try:
-            drive = tomllib.loads(job)["drive"]
+            sections = tomllib.loads(job)
+            drive = sections["drive"]
+            self.straight = not (
+                sections.get("mixer")
+                or drive.get("intermediate_MHz")
+                or drive.get("correction") == "inverse"
+            )
             bound, rabi_max = drive.get("bound", "circle"), drive["rabi_max_MHz"]
             sane = bound in ("circle", "box") and math.isfinite(rabi_max) and rabi_max > 0
         except (tomllib.TOMLDecodeError, RecursionError, KeyError, TypeError, AttributeError):
@@ -245,7 +251,11 @@ class _Reader(Access):
         full_scale: float,
         bits: int,
     ) -> None:
-        """Drive and codes within the bound, and the codes those of the drive, within one."""
+        """Codes within the bound; on a straight path the drive too, and the codes its own.
+
+        Own means within one step. Where the job corrects mixer or line, or puts the pulse on an
+        intermediate frequency, the codes are something else than the drive wanted.
+        """
         top = dac.largest_code(bits)
         wide = codes.astype(np.int64)
         outside = np.max(np.abs(wide)) > top
@@ -256,6 +266,8 @@ class _Reader(Access):
             raise self.refuse(
                 f"{place}/dac_i, dac_q", f"codes within {top} ({self.bound})", f"{largest:.9g}"
             )
+        if not self.straight:  # corrections stand between the drive and its codes
+            return
         try:
             wanted = np.repeat(dac.encode(drive, full_scale, bits, self.bound), samples, axis=0)
         except SafetyError as error:

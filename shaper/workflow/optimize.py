@@ -10,11 +10,12 @@ from shaper.composite.limit import limit
 from shaper.composite.sandwich import sandwich
 from shaper.composite.sequence import place
 from shaper.job import Job, parse_job
-from shaper.pulse import Score, Table, Waveform, make_pulse
+from shaper.pulse import Score, Table, Waveform
 from shaper.search import descent
 from shaper.search.checkpoint import Checkpoint
 from shaper.search.duration import Shortest, search_shortest
 from shaper.units import NS
+from shaper.wiring import play
 from shaper.workflow.assemble import assemble
 
 _LIBRARIES = ("jax", "optax", "numpy", "scipy", "h5py")
@@ -37,6 +38,7 @@ def optimize(
     Returns:
         the record of a waveform file, with pulses "shaped" and "sandwich".
     """
+    baseline = place(sandwich(job.target, job.bound), job)
     curve = {}
     if job.find_shortest:
         shortest = search_shortest(job, progress, stop)
@@ -44,16 +46,9 @@ def optimize(
         curve = _curve(shortest)
     else:
         found = descent.search(job, progress, stop, checkpoint=checkpoint)
-    shaped = make_pulse(
-        found.drive,
-        np.full(job.slices, job.samples_per_slice),
-        full_scale=job.rabi_max,
-        bits=job.dac_bits,
-        bound=job.bound,
-        sample_rate=job.sample_rate,
-        origin="optimized",
-    )
-    pulses = {"shaped": shaped, "sandwich": place(sandwich(job.target, job.bound), job)}
+    samples = np.full(job.slices, job.samples_per_slice)
+    shaped = play(job, found.drive, samples, "optimized", polished=True)
+    pulses = {"shaped": shaped, "sandwich": baseline}
     return assemble(
         job,
         pulses,
