@@ -15,12 +15,13 @@ from shaper.evidence.budget import Budget
 from shaper.figures import DARK, LIGHT, budget_figure
 from shaper.job import parse_job
 from shaper.physics.propagate import propagate
+from shaper.pulse import Table
 from shaper.report.parts import pulse_table, typeset
 from shaper.store import save_waveform
 from shaper.target import infidelity
 from shaper.workflow.compare import as_json, compare
 from shaper.workflow.notebook import attach, comparison_html, waveform_html
-from shaper.workflow.pictures import budget_table
+from shaper.workflow.pictures import budget_table, duration_table, figure_tables, pictures
 from shaper.workflow.report import live_data, make_report
 from shaper.workflow.verify import Claim, Verification, with_evidence
 
@@ -82,7 +83,7 @@ def test_nothing_points_outside_and_nothing_is_styled_in_place(page):
 @pytest.fixture
 def without_pictures(monkeypatch):
     """Drawing takes seconds; where pictures do not matter there are none."""
-    monkeypatch.setattr("shaper.workflow.report.pictures", lambda found, job: [])
+    monkeypatch.setattr("shaper.workflow.report.pictures", lambda *found: [])
 
 
 def test_text_of_the_job_is_shown_as_text(page, without_pictures):
@@ -191,6 +192,17 @@ def test_the_stored_budget_is_drawn_and_the_second_opinion_told(without_pictures
     del found["bb1"]
     assert "found again" in make_report(with_evidence(case, found))
     budget_figure(table)
+
+
+def test_the_curve_of_the_shortest_duration_is_drawn():
+    case = make_case()
+    axes = ("duration_s",)
+    case.history["duration_s"] = Table(np.array([3e-8, 4e-8]), axes, "s", "tried")
+    case.history["best_infidelity"] = Table(np.array([1e-3, 1e-5]), axes, "1", "best")
+    table = duration_table(case)
+    np.testing.assert_allclose(table["duration_ns"], [30, 40])
+    drawn = pictures(figure_tables(case, compare(case)), parse_job(case.job_text), 2.6e-8)
+    assert "Shortest duration" in [picture.heading for picture in drawn]
 
 
 def test_the_verdict_stands_first(page):

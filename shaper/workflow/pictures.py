@@ -12,7 +12,7 @@ from shaper.evidence import tables
 from shaper.job import Job
 from shaper.pulse import Table, Waveform
 from shaper.report import Picture
-from shaper.units import MHZ
+from shaper.units import MHZ, NS
 from shaper.wiring import arriving
 from shaper.workflow.compare import Comparison, cuts, maps
 
@@ -31,8 +31,8 @@ def figure_tables(waveform: Waveform, comparison: Comparison) -> dict:
     """All tables that the report's figures are drawn from.
 
     Returns:
-        By figure: ``waveform``, ``cuts``, ``map``, ``spectrum``, ``discs``, and ``history`` and
-        ``budget`` where the file holds them, each as ``shaper.figures`` takes it.
+        By figure: ``waveform``, ``cuts``, ``map``, ``spectrum``, ``discs``, and ``history``,
+        ``duration`` and ``budget`` where the file holds them, each as ``shaper.figures`` takes it.
     """
     job, pulses = comparison.job, comparison.pulses
     first, *others = pulses
@@ -52,6 +52,7 @@ def figure_tables(waveform: Waveform, comparison: Comparison) -> dict:
             {name: arriving(job, pulse) for name, pulse in both.items()}, starts, 0.0, job.detuning
         ),
         "history": history_table(waveform),
+        "duration": duration_table(waveform),
         "budget": budget_table(waveform),
     }
     return {name: table for name, table in found.items() if table is not None}
@@ -69,6 +70,17 @@ def history_table(waveform: Waveform) -> dict | None:
 
 def _is_history(name: str, table: Table) -> bool:
     return tuple(table.axes) == ("start", "iteration") and ("infidelity" in name or name == "cost")
+
+
+def duration_table(waveform: Waveform) -> dict | None:
+    """Best infidelity against duration, if the shortest one was looked for."""
+    duration, best = (waveform.history.get(k) for k in ("duration_s", "best_infidelity"))
+    if duration is None or best is None or np.shape(duration.values) != np.shape(best.values):
+        return None
+    return {
+        "duration_ns": np.asarray(duration.values, dtype=float) / NS,
+        "infidelity": np.asarray(best.values, dtype=float),
+    }
 
 
 def budget_table(waveform: Waveform) -> dict | None:
@@ -94,12 +106,13 @@ def budget_table(waveform: Waveform) -> dict | None:
     }
 
 
-def pictures(found: dict, job: Job) -> list[Picture]:
+def pictures(found: dict, job: Job, shortest: float) -> list[Picture]:
     """The figures of the report, each for light and dark paper.
 
     Args:
         found: ``figure_tables``.
         job: bound and tolerance are drawn into them.
+        shortest: s, possible or known duration for the target.
     """
     box = {
         "amplitude_tolerance": job.amplitude_tolerance,
@@ -147,6 +160,21 @@ def pictures(found: dict, job: Job) -> list[Picture]:
                 "How the infidelity of each start fell during the search.",
                 lambda theme: figures.history_figure(
                     found["history"], stop_infidelity=job.stop_infidelity, theme=theme
+                ),
+            )
+        )
+    if "duration" in found:
+        drawn.append(
+            _drawn(
+                "Shortest duration",
+                "Best infidelity found at each duration that was tried; hatched: no pulse can be "
+                "that short.",
+                "How the best infidelity falls with the duration.",
+                lambda theme: figures.duration_figure(
+                    found["duration"],
+                    limit_ns=shortest / NS,
+                    stop_infidelity=job.stop_infidelity,
+                    theme=theme,
                 ),
             )
         )

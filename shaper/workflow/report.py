@@ -58,7 +58,7 @@ def make_report(
             verdict=sentence(comparison.verdict, job),
             rows=numbers["pulses"],
             facts=_facts(comparison, facts),
-            pictures=pictures(figure_tables(waveform, comparison), job),
+            pictures=pictures(figure_tables(waveform, comparison), job, comparison.shortest),
             live=live_data(comparison),
             cautions=[*_CAUTIONS, *facts["warnings"]],
             job_text=waveform.job_text,
