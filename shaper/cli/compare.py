@@ -26,6 +26,7 @@ def add(commands):
         "its job, as the DAC codes play it: duration and its ratio to the shortest possible, "
         "peak, rms, energy, average gate infidelity without errors, mean, worst and guaranteed, "
         "tolerance windows, error orders, and what T1 and T2 take; with a verdict.",
+        epilog="Example: shaper compare z90_robust.h5 --against all --figure compare.png",
     )
     command.add_argument("file", metavar="FILE.h5", help="waveform file")
     command.add_argument(

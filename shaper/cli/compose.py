@@ -13,6 +13,7 @@ def add(commands):
         description="Write composite pulses for a job as a waveform file: each on the sample grid "
         "as it would really be loaded, with its source. Without --output, list what the library "
         "has for the job's target.",
+        epilog="Example: shaper compose configs/z90_robust.toml --pulse BB1 CORPSE --output bb1.h5",
     )
     command.add_argument("job", metavar="JOB.toml", help="job file")
     command.add_argument(

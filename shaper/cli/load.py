@@ -18,7 +18,8 @@ def add(commands):
         "the job. With --to and --profile: into the memory of an instrument, in a careful order, "
         "with a load record. Everything is read back and compared (exit code 5 if it differs). "
         "No output is ever switched on.",
-        epilog="In a set from several files a trace is called after its file; "
+        epilog="Example: shaper load z90.h5:shaped --folder out. "
+        "In a set from several files a trace is called after its file; "
         "FILE.h5:PULSE=TRACE names it. If one trace of a set fails, those loaded before it are "
         "removed again; what --replace has overwritten is not restored.",
     )

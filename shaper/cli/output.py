@@ -21,6 +21,8 @@ def add(commands):
         "profile's limits; print the cautions; ask for the word of the person at the bench; only "
         "then switch on. --off: switch off and say whether that was confirmed. Which trace an "
         "output plays is set at the instrument.",
+        epilog="Example: shaper output 127.0.0.1:5025 --on --record z90.load.json "
+        "--profile configs/instruments/alder_awg.toml",
     )
     command.add_argument("address", metavar="ADDRESS", help="host:port, or a VISA resource")
     way = command.add_mutually_exclusive_group(required=True)

@@ -18,6 +18,7 @@ def add(commands):
         "exponentials and an adaptive integrator that share nothing with the search, and print "
         "the error budget: what each effect of the bench costs alone, what all cost together, "
         "what dominates and what to change first. Exit code 1 if a claim does not hold.",
+        epilog="Example: shaper verify z90_robust.h5 --figure budget.svg",
     )
     command.add_argument("file", metavar="FILE.h5", help="waveform file")
     command.add_argument(
