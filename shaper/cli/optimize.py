@@ -53,10 +53,15 @@ def run(args) -> int:
     if args.shortest and job.stop_infidelity is None:
         raise InputError(f"{args.job}: --shortest needs search.stop_infidelity, got none")
     job = replace(job, find_shortest=job.find_shortest or args.shortest)
-    if args.resume and job.find_shortest:
-        raise InputError("--resume: a search for the shortest duration begins anew each time")
+    if args.resume and (job.find_shortest or job.anharmonicity is not None):
+        raise InputError(
+            "--resume: expected a search with checkpoints; one for the shortest duration or on a "
+            "ladder begins anew each time"
+        )
     output = Path(args.output or Path(args.job).with_suffix(".h5").name)
-    _require_writable(output)
+    _require_writable("--output", output)
+    if args.figure:
+        _require_figure(Path(args.figure))
     from shaper.search.checkpoint import Checkpoint
     from shaper.store import save_waveform
     from shaper.store.atomic import replace_file
@@ -91,15 +96,24 @@ def run(args) -> int:
     return 0
 
 
-def _require_writable(path: Path) -> None:
+def _require_writable(option: str, path: Path) -> None:
     """Refuse before minutes are spent, not after."""
     from shaper.errors import InputError
 
     folder = path.parent
     if not folder.is_dir():
-        raise InputError(f"--output {path}: expected an existing folder, {folder} is none")
+        raise InputError(f"{option} {path}: expected an existing folder, {folder} is none")
     if path.is_dir() or not os.access(folder, os.W_OK):
-        raise InputError(f"--output {path}: expected a file that can be written there")
+        raise InputError(f"{option} {path}: expected a file that can be written there")
+
+
+def _require_figure(path: Path) -> None:
+    from shaper.errors import InputError
+    from shaper.figures.style import SUFFIXES
+
+    _require_writable("--figure", path)
+    if path.suffix.lower() not in SUFFIXES:
+        raise InputError(f"--figure {path}: expected a name that ends in {', '.join(SUFFIXES)}")
 
 
 def _text(job, waveform) -> str:
@@ -120,6 +134,10 @@ def _text(job, waveform) -> str:
             figures = [score.nominal, score.mean, score.worst, score.guaranteed, score.dac_worst]
         rows.append([name, plain(pulse.duration / second, 6), *map(small, figures)])
     lines = [f"{job.title or job.target_name}", "", aligned(header, rows), ""]
+    if waveform.history_attrs.get("levels", 2) > 2:
+        lines.append(
+            f"Infidelities are those of {waveform.history_attrs['levels']} levels, leakage counted."
+        )
     lines.append(f"search {waveform.status}: {STATUSES[waveform.status]}")
     if job.target.needs_no_pulse:
         lines.append(

@@ -16,7 +16,7 @@ from shaper.job import Job
 
 INTERVAL = 30.0  # s between two checkpoints
 # what reading a zip archive of arrays raises if bytes of it are wrong
-_DAMAGED = (OSError, ValueError, EOFError, KeyError, NotImplementedError, zipfile.BadZipFile)
+_DAMAGED = (OSError, ValueError, EOFError, KeyError, RuntimeError, zipfile.BadZipFile)
 
 
 class Checkpoint:
