@@ -34,6 +34,7 @@ def test_every_argument_of_every_command_is_listed():
 def test_every_command_and_argument_has_help():
     for name, command in commands().items():
         assert command.description, name
+        assert f"shaper {name} " in (command.epilog or ""), f"{name}: no example"
         for action in command._actions:
             assert action.help, (name, action.dest)
 

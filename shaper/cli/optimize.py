@@ -17,6 +17,7 @@ def add(commands):
         help="search for the waveform that a job asks for",
         description="Search for the waveform that a job file asks for, and write it with the "
         "analytic sandwich beside it. Ctrl-C ends the search and keeps the best so far.",
+        epilog="Example: shaper optimize configs/z90.toml --output results/z90.h5",
     )
     command.add_argument("job", metavar="JOB.toml", help="job file")
     command.add_argument(
