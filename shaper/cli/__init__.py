@@ -39,6 +39,9 @@ def parser() -> argparse.ArgumentParser:
 
 def main(argv: list[str] | None = None) -> int:
     """Run one command; returns the exit code (see ``--help``)."""
+    # read when SciPy is loaded: its threads wait for each other longer than the search's many
+    # small factorizations take, four times longer on two busy cores
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
     args = parser().parse_args(argv)
     try:
         return args.run(args)
