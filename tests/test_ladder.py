@@ -11,7 +11,7 @@ from shaper.drive.line import filtered, first_order, taps
 from shaper.errors import InputError
 from shaper.physics import leakage, two_level
 from shaper.physics.ladder import Ladder, derivative_corrected, plan, propagate_qubit
-from shaper.search.ladder import bounded, search_ladder, unbounded
+from shaper.search.ladder import search_ladder
 from shaper.target import Target, infidelity
 
 jax.config.update("jax_enable_x64", True)
@@ -35,13 +35,9 @@ def textbook(ladder, drive, duration, eps=0.0, delta=0.0):
 
 
 def columns(ladder, drive, duration, eps=(0.0,), delta=(0.0,)):
-    """[grid, level, 2] complex from the engine."""
-    steps = plan(
-        ladder,
-        duration,
-        np.max(np.hypot(*np.asarray(drive).T)) * (1 + np.max(np.abs(eps))),
-        np.max(np.abs(delta)),
-    )
+    """[grid, level, 2] complex from the engine; bounds rounded up, so that programs are shared."""
+    reach = np.max(np.hypot(*np.asarray(drive).T)) * (1 + np.max(np.abs(eps)))
+    steps = plan(ladder, duration, 2 ** np.ceil(np.log2(reach)), np.max(np.abs(delta)))
     re, im = propagate_qubit(
         ladder, steps, jnp.asarray(drive), duration, jnp.asarray(eps), jnp.asarray(delta)
     )
@@ -52,8 +48,10 @@ def without_phase(u):
     return u * np.exp(-1j * np.angle(u.ravel()[0]))
 
 
-@pytest.mark.parametrize("levels", [3, 4, 5])
-@pytest.mark.parametrize("duration", [0.25 * NS, 2 * NS])  # the second one is cut into parts
+@pytest.mark.parametrize(
+    ("levels", "duration"),
+    [(3, 0.25 * NS), (3, 2 * NS), (4, 0.25 * NS), (5, 0.25 * NS)],  # the long one is cut
+)
 def test_propagator_is_the_matrix_exponential(rng, levels, duration):
     ladder = Ladder(-210 * MHZ, levels)
     drive = rng.normal(0, 60 * MHZ, (15, 2))
@@ -74,7 +72,7 @@ def test_wide_grid_is_carried_in_blocks(rng):
         assert np.max(np.abs(together[k] - alone[0])) < EXACT
 
 
-@pytest.mark.parametrize("levels", [3, 4])
+@pytest.mark.parametrize("levels", [4])
 def test_gradient_is_the_central_difference(rng, levels):
     ladder = Ladder(-210 * MHZ, levels)
     drive = rng.normal(0, 40 * MHZ, (12, 2))
@@ -217,17 +215,6 @@ def test_seepage_balances_leakage(rng):
     comes_in = np.sum(np.abs(u[:2, 2:]) ** 2) / 2
     assert leakage.seepage(u[:, :2]) == pytest.approx(comes_in, abs=EXACT)
     assert leakage.leakage(u[:, :2]) > 1e-3
-
-
-def test_bounded_is_onto_and_inside(rng):
-    x = 3 * rng.normal(size=(500, 2))
-    assert np.max(np.hypot(*np.asarray(bounded(x, 2.0, "circle")).T)) <= 2.0
-    assert np.max(np.abs(bounded(x, 2.0, "box"))) <= 2.0
-    for bound in ("circle", "box"):
-        drive = 0.7 * rng.uniform(-1, 1, (40, 2))
-        drive[0] = 0.0
-        back = bounded(unbounded(drive, 1.0, bound), 1.0, bound)
-        assert np.max(np.abs(back - drive)) < EXACT
 
 
 def test_search_reaches_round_off_where_the_gaussian_cannot():
