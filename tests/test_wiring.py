@@ -78,14 +78,16 @@ def test_what_is_wanted_arrives(wanted, extra, drive, within):
 def test_polish_is_asked_for_by_the_job(wanted):
     target_job = bench(bits=8)
     plain = play(target_job, wanted, np.ones(40, int), "optimized")
-    polished = play(bench(bits=8, drive="polish = true"), wanted, np.ones(40, int), "optimized")
+    asked = bench(bits=8, drive="polish = true")
+    polished = play(asked, wanted, np.ones(40, int), "optimized", polished=True)
     target = Target(end(wanted, np.full(40, NS)))
     lost = [infidelity(end(*arriving(target_job, p)), target) for p in (plain, polished)]
     # the polish holds the error against the job's own gate: here that error is large, so the
     # codes only have to keep it; against the float pulse they are a hundred times closer
     assert lost[1] < lost[0] / 100
     with pytest.raises(InputError, match="drive.polish: expected false with a mixer"):
-        play(bench("[mixer]\ngain = 1.1\n", drive="polish = true"), wanted, np.ones(40, int), "x")
+        faulty = bench("[mixer]\ngain = 1.1\n", drive="polish = true")
+        play(faulty, wanted, np.ones(40, int), "optimized", polished=True)
 
 
 def test_corrections_that_need_too_much_room_are_refused(wanted):
