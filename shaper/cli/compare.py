@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import dataclasses
 import json
 import sys
 
@@ -189,6 +188,10 @@ def _main_table(comparison) -> str:
     return aligned(header, table)
 
 
+def _on_levels(found) -> tuple[float, float, float]:
+    return found.nominal, found.worst, found.leakage
+
+
 def _robustness_table(comparison) -> str:
     from shaper.cli.table import aligned, plain, small
     from shaper.readable import rate_unit
@@ -213,7 +216,7 @@ def _robustness_table(comparison) -> str:
                 *(plain(window / hertz, 3) for window in row.detuning_windows),
                 term(row.amplitude_order, "e"),
                 term(row.detuning_order, "f"),
-                *(small(value) for value in (dataclasses.astuple(row.levels) if laddered else ())),
+                *(map(small, _on_levels(row.levels)) if laddered else ()),
                 small(row.coherence),
                 small(row.total),
             ]

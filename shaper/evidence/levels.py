@@ -2,19 +2,22 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 
+from shaper.bench import dense_grid
 from shaper.job import Job
 from shaper.physics import leakage
 
-LEVELS = 3  # the third is the first to be reached; the fourth matters at the square of its leakage
+_POINTS, _DENSITY = 9, 3.0  # per axis of the tolerance box, at least; points per rad of reach
 _AT_ONCE = 20_000  # segments times grid points
 
 
 def qubit_columns(
     drive: np.ndarray, durations: np.ndarray, job: Job, eps: np.ndarray, delta: np.ndarray
 ) -> np.ndarray:
-    """What becomes of |0> and |1> on three levels, at each grid point.
+    """What becomes of |0> and |1> on the job's levels, at each grid point.
 
     The Hamiltonian is that of ``physics.ladder``; every segment is exponentiated by its
     eigenvectors, whatever its length.
@@ -26,11 +29,11 @@ def qubit_columns(
     Returns:
         [grid, level, 2] complex.
     """
-    n = np.arange(LEVELS)
+    n = np.arange(job.levels)
     lower = np.diag(np.sqrt(n[1:]), 1)  # <n-1|a|n>
     still = np.asarray(delta)[:, None] * (0.5 - n) + job.anharmonicity * n * (n - 1) / 2
-    still = still[:, None, :] * np.eye(LEVELS)  # [grid, level, level]
-    total = np.broadcast_to(np.eye(LEVELS, dtype=complex), still.shape)
+    still = still[:, None, :] * np.eye(job.levels)  # [grid, level, level]
+    total = np.broadcast_to(np.eye(job.levels, dtype=complex), still.shape)
     at_once = max(1, _AT_ONCE // len(still))
     for first in range(0, len(drive), at_once):
         part = slice(first, first + at_once)
@@ -46,7 +49,7 @@ def qubit_columns(
 def level_infidelity(
     drive: np.ndarray, durations: np.ndarray, job: Job, eps: np.ndarray, delta: np.ndarray
 ) -> np.ndarray:
-    """[grid] Average gate infidelity on three levels, leakage counted; arguments as above.
+    """[grid] Average gate infidelity on the job's levels, leakage counted; arguments as above.
 
     Source:
         Pedersen, Moller and Molmer, Phys. Lett. A 367, 47 (2007), see ``physics.leakage``.
@@ -55,9 +58,40 @@ def level_infidelity(
 
 
 def on_levels(drive: np.ndarray, durations: np.ndarray, job: Job) -> tuple[float, float]:
-    """Infidelity and leakage on three levels without errors."""
+    """Infidelity and leakage on the job's levels without errors."""
     columns = qubit_columns(drive, durations, job, np.zeros(1), np.array([job.detuning]))
     return (
         float(leakage.infidelity(columns, job.target)[0]),
         float(leakage.leakage(columns)[0]),
     )
+
+
+@dataclass(frozen=True)
+class OnLevels:
+    """A pulse on the levels of an anharmonic ladder, leakage counted.
+
+    Attributes:
+        nominal: infidelity without errors.
+        mean: infidelity over the tolerance box.
+        worst: largest infidelity over the tolerance box, on a coarse grid.
+        leakage: population left outside the qubit, without errors.
+    """
+
+    nominal: float
+    mean: float
+    worst: float
+    leakage: float
+
+
+def box_on_levels(drive: np.ndarray, durations: np.ndarray, job: Job) -> OnLevels:
+    """The largest of each figure over the job's qubits; all have the job's anharmonicity."""
+    found = []
+    for qubit in map(job.for_group, job.groups):
+        nominal, leaked = on_levels(drive, durations, qubit)
+        mean = worst = nominal
+        if qubit.has_tolerance:
+            grid = dense_grid(qubit, (_POINTS, _POINTS), _DENSITY, float(np.sum(durations)))
+            over_box = level_infidelity(drive, durations, qubit, grid.eps, grid.delta)
+            mean, worst = float(grid.weight @ over_box), max(nominal, float(np.max(over_box)))
+        found.append((nominal, mean, worst, leaked))
+    return OnLevels(*(max(column) for column in zip(*found, strict=True)))

@@ -7,9 +7,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from shaper.bench import dense_grid
 from shaper.composite.sequence import Sequence, played_ideally
-from shaper.evidence.levels import level_infidelity, on_levels
+from shaper.evidence.levels import OnLevels, box_on_levels
 from shaper.evidence.order import Leading, leading
 from shaper.evidence.proof import prove_groups
 from shaper.evidence.score import GroupFigures, box_infidelity, group_infidelities, together
@@ -22,21 +21,6 @@ from shaper.wiring import arriving
 _LEVEL_POINTS = 9  # per axis, at least: levels cost a hundred times what the qubit does
 _LEVEL_DENSITY = 2.0  # points per rad of reach
 THRESHOLDS = (1e-4, 1e-3)  # of the tolerance windows
-
-
-@dataclass(frozen=True)
-class OnLevels:
-    """Figures of a three-level ladder, leakage counted.
-
-    Attributes:
-        nominal: infidelity without errors.
-        worst: largest infidelity on a coarse grid over the tolerance box, corners included.
-        leakage: population lost from the qubit, without errors.
-    """
-
-    nominal: float
-    worst: float
-    leakage: float
 
 
 @dataclass(frozen=True)
@@ -158,7 +142,7 @@ def measure(
         detuning_windows=_windows(*played, job, "detuning"),
         amplitude_order=leading(*on_paper, job, "amplitude"),
         detuning_order=leading(*on_paper, job, "detuning"),
-        levels=None if job.anharmonicity is None else _on_levels(*played, job),
+        levels=None if job.anharmonicity is None else box_on_levels(*played, job),
         coherence=coherence_limit(pulse.duration, job.t1, job.t2) if decays else None,
     )
 
@@ -170,16 +154,3 @@ def _windows(drive: np.ndarray, durations: np.ndarray, job: Job, error: str) -> 
         min(tolerance_window(drive, durations, qubit, error, limit) for qubit in qubits)
         for limit in THRESHOLDS
     )
-
-
-def _on_levels(drive: np.ndarray, durations: np.ndarray, job: Job) -> OnLevels:
-    """The largest of each figure over the qubits; all have the job's anharmonicity."""
-    found = []
-    for qubit in map(job.for_group, job.groups):
-        nominal, leakage = on_levels(drive, durations, qubit)
-        grid = dense_grid(
-            qubit, (_LEVEL_POINTS, _LEVEL_POINTS), _LEVEL_DENSITY, float(np.sum(durations))
-        )
-        over_box = level_infidelity(drive, durations, qubit, grid.eps, grid.delta)
-        found.append((nominal, max(nominal, float(np.max(over_box))), leakage))
-    return OnLevels(*(max(column) for column in zip(*found, strict=True)))

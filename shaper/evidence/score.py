@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from shaper.bench import score_grid
+from shaper.evidence.levels import box_on_levels
 from shaper.evidence.proof import prove_pulse
 from shaper.job import Job
 from shaper.physics.propagate import propagate
@@ -32,7 +33,7 @@ class GroupFigures:
     worst: float
 
 
-def score(pulse: Pulse, job: Job) -> Score:
+def score(pulse: Pulse, job: Job, on_levels: bool = False) -> Score:
     """Infidelity of a pulse against the job's target: nominal, and over the tolerance box.
 
     Both go through all that stands between DAC and qubit (``wiring``).
@@ -48,7 +49,17 @@ def score(pulse: Pulse, job: Job) -> Score:
     Args:
         pulse: shaped or composite, on the sample grid.
         job: target, detuning and tolerance box, of all its qubits.
+        on_levels: take the job's anharmonicity and levels into account; the box is then sampled
+            on the coarser grid of ``evidence.levels``, and no bound is proved.
     """
+    if on_levels:
+        floats, codes = (
+            box_on_levels(*wanted(job, pulse), job),
+            box_on_levels(*arriving(job, pulse), job),
+        )
+        return Score(
+            floats.nominal, floats.mean, floats.worst, codes.nominal, codes.mean, codes.worst
+        )
     floats = box_infidelity(*wanted(job, pulse), job)
     codes = box_infidelity(*arriving(job, pulse), job)
     guaranteed = prove_pulse(pulse, job).guaranteed if job.has_tolerance else None

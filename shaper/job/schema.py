@@ -287,6 +287,8 @@ class JobFile(Section):
                     "shape.rise_ns: expected less than half of pulse.duration_ns = "
                     f"{self.pulse.duration_ns:g}, got {self.shape.rise_ns:g}"
                 )
+        if self.qubit.anharmonicity_MHz is not None:
+            self._require_what_a_ladder_can()
         if self.line.kind == "touchstone" and self.drive.carrier_GHz is None:
             raise ValueError("drive.carrier_GHz: expected a value with a touchstone line, got none")
         if abs(self.drive.intermediate_MHz) >= self.drive.sample_rate_MSps / 2:
@@ -302,6 +304,21 @@ class JobFile(Section):
                 "which errors, and how they weigh, is read from it"
             )
         return self
+
+    def _require_what_a_ladder_can(self):
+        """The search on a ladder knows one qubit, a fixed duration and no wishes."""
+        unknown = {
+            "group": bool(self.group),
+            "pulse.duration_ns": self.pulse.duration_ns == "shortest",
+            "search.minimize": self.search.minimize == "first_order",
+            "shape": self.shape != ShapeSection(),
+        }
+        for key, asked in unknown.items():
+            if asked:
+                raise ValueError(
+                    f"{key}: expected a job without qubit.anharmonicity_MHz; the search on a "
+                    "ladder cannot do this yet"
+                )
 
     def _require_goal(self):
         tolerant = self.tolerance.amplitude or self.tolerance.detuning_MHz

@@ -16,6 +16,7 @@ import jax
 import jax.numpy as jnp
 import numpy as np
 
+from shaper.drive.bound import parameters, quadratures
 from shaper.drive.line import filtered
 from shaper.physics import leakage as quality
 from shaper.physics.ladder import Ladder, derivative_corrected, plan, propagate_qubit
@@ -27,7 +28,6 @@ Array = jax.Array
 _MODES = 5  # sine harmonics in a random start
 _FIRST_DAMPING = 1e-2
 _LARGEST_DAMPING = 1e8  # no step left that lowers the cost
-_CENTER = 1e-8  # |x|^2 below which sin|x|/|x| is taken from its series
 _STILL = 1e-30  # cost that counts as zero
 
 
@@ -71,6 +71,7 @@ def search_ladder(
     seed: int = 0,
     warm: np.ndarray | None = None,
     kernel: np.ndarray | None = None,
+    between: Callable[[str, int, int, float], bool] = lambda *_: False,
 ) -> LadderPulse:
     """The best pulse found for a gate on a ladder.
 
@@ -86,6 +87,8 @@ def search_ladder(
         warm: [slice, 2] rad/s, a first guess of the caller's, tried first.
         kernel: of ``drive.line.Taps`` on the slice clock: the search then sees what arrives
             behind the line, tail included. None: no line.
+        between: called as ``between(stage, done, of, lowest cost)`` after each start and round;
+            True ends the search with what is best so far.
     """
     eps, delta = np.broadcast_arrays(
         np.atleast_1d(np.asarray(eps, dtype=float)), np.atleast_1d(np.asarray(delta, dtype=float))
@@ -97,14 +100,16 @@ def search_ladder(
     rng = np.random.default_rng(seed)
     best, lowest, costs = None, math.inf, []
     for drive in _starts(rng, ladder, target, slices, slice_duration, rabi_max, starts, warm):
-        x, cost = descend(unbounded(drive, rabi_max, bound), even)
+        x, cost = descend(jnp.asarray(parameters(drive / rabi_max, bound)), even)
         costs.append(float(cost))
         if costs[-1] < lowest or best is None:
             best, lowest = x, costs[-1]
-        if lowest <= stop:
+        ended = between("exploring on the ladder", len(costs), starts, lowest)
+        if lowest <= stop or ended:
             break
-    best = _toward_worst(descend, lost, best, even, rounds)
-    drive = np.asarray(bounded(best, rabi_max, bound))
+    if not ended:
+        best = _toward_worst(descend, lost, best, even, rounds, between)
+    drive = np.asarray(rabi_max * quadratures(best, bound))
     columns = _columns(ladder, drive, slice_duration, rabi_max, bound, eps, delta, kernel)
     return LadderPulse(
         drive,
@@ -112,30 +117,6 @@ def search_ladder(
         quality.leakage(columns),
         np.array(costs),
     )
-
-
-def bounded(x: Array, rabi_max: float, bound: str) -> Array:
-    """Free numbers [slice, 2] to drive [slice, 2] rad/s that cannot leave the bound.
-
-    Circle: ``W_max x sin|x|/|x|``; box: ``W_max sin x``. Smooth, onto, and the bound itself is
-    reached at finite ``x``.
-    """
-    if bound == "box":
-        return rabi_max * jnp.sin(x)
-    square = jnp.sum(x * x, axis=-1, keepdims=True)
-    small = square < _CENTER
-    radius = jnp.sqrt(jnp.where(small, 1.0, square))
-    return rabi_max * x * jnp.where(small, 1 - square / 6, jnp.sin(radius) / radius)
-
-
-def unbounded(drive: np.ndarray, rabi_max: float, bound: str) -> Array:
-    """Free numbers for a drive; what lies outside the bound is drawn onto it."""
-    share = np.asarray(drive, dtype=float) / rabi_max
-    if bound == "box":
-        return jnp.asarray(np.arcsin(np.clip(share, -1, 1)))
-    length = np.linalg.norm(share, axis=-1, keepdims=True)
-    inside = np.minimum(length, 1.0)
-    return jnp.asarray(share * np.arcsin(inside) / np.where(length == 0, 1.0, length))
 
 
 def _plan(ladder, slice_duration, rabi_max, bound, eps, delta):
@@ -175,7 +156,7 @@ def _amplitudes(
     steps = _plan(ladder, step, _overshoot(kernel) * rabi_max, bound, 0.1, 0.1 * rabi_max)
 
     def errors(x, eps, delta):
-        drive, step = _arrived(bounded(x, rabi_max, bound), slice_duration, kernel)
+        drive, step = _arrived(rabi_max * quadratures(x, bound), slice_duration, kernel)
         re, im = propagate_qubit(ladder, steps, drive, step, eps[None], delta[None])
         re, im = re[0], im[0]
         parts = []
@@ -237,7 +218,7 @@ def _descent(errors: Callable, eps: Array, delta: Array, iterations: int) -> Cal
     return descend
 
 
-def _toward_worst(descend, lost, x, even, rounds):
+def _toward_worst(descend, lost, x, even, rounds, between):
     """Raise the weight of the points that lose most; keeps the pulse of the lowest worst case.
 
     Source:
@@ -247,7 +228,7 @@ def _toward_worst(descend, lost, x, even, rounds):
     if rounds == 0:
         return x
     weight, best, lowest = even, x, float(np.max(lost(x)))
-    for _ in range(rounds):
+    for done in range(rounds):
         now = np.asarray(lost(x))
         weight = weight * np.sqrt(now / np.max(now) + 1e-12)  # root: slower, but without cycles
         weight = weight / np.sum(weight)
@@ -255,6 +236,8 @@ def _toward_worst(descend, lost, x, even, rounds):
         worst = float(np.max(lost(x)))
         if worst < lowest:
             best, lowest = x, worst
+        if between("polishing on the ladder", done + 1, rounds, lowest):
+            break
     return best
 
 

@@ -13,13 +13,19 @@ from shaper.pulse import Pulse, Waveform
 
 
 def assemble(
-    job: Job, pulses: dict[str, Pulse], status: str, libraries: tuple[str, ...], **more
+    job: Job,
+    pulses: dict[str, Pulse],
+    status: str,
+    libraries: tuple[str, ...],
+    on_levels: bool = False,
+    **more,
 ) -> Waveform:
     """The waveform record of some pulses of one job, each scored on the one grid.
 
     Args:
         status: of the search, see ``Waveform``.
         libraries: names of the packages that the numbers came through.
+        on_levels: whether the scores are those of the job's anharmonic ladder.
         more: further fields of ``Waveform``.
     """
     return Waveform(
@@ -33,7 +39,7 @@ def assemble(
         error_rows=job.target.error_rows,
         error_scale=job.target.scale,
         pulses=pulses,
-        scores={name: score(pulse, job) for name, pulse in pulses.items()},
+        scores={name: score(pulse, job, on_levels) for name, pulse in pulses.items()},
         **more,
     )
 

@@ -12,6 +12,7 @@ from shaper.composite.sequence import place
 from shaper.job import Job, parse_job
 from shaper.pulse import Score, Table, Waveform
 from shaper.search import descent
+from shaper.search.anharmonic import search_on_levels
 from shaper.search.checkpoint import Checkpoint
 from shaper.search.duration import Shortest, search_shortest
 from shaper.units import NS
@@ -44,6 +45,8 @@ def optimize(
         shortest = search_shortest(job, progress, stop)
         job, found = shortest.job, shortest.found
         curve = _curve(shortest)
+    elif job.anharmonicity is not None:
+        found = search_on_levels(job, progress, stop)
     else:
         found = descent.search(job, progress, stop, checkpoint=checkpoint)
     samples = np.full(job.slices, job.samples_per_slice)
@@ -54,6 +57,7 @@ def optimize(
         pulses,
         found.status,
         _LIBRARIES,
+        on_levels=job.anharmonicity is not None,
         history=_history(found) | curve,
         history_attrs={
             "stages": " ".join(found.history),
@@ -61,6 +65,7 @@ def optimize(
             "start_names": " ".join(found.names),
             "start_statuses": " ".join(found.statuses),
             "remedy": descent.STATUSES[found.status],
+            "levels": 2 if job.anharmonicity is None else job.levels,
         },
     )
 
