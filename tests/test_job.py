@@ -256,13 +256,49 @@ FAULTS = {
     ),
     "title on two lines": (("title = ", 'title = "a\\nb" #'), ["title: expected printable text"]),
     "goal beyond one": (("stop_infidelity = 1e-9", "stop_infidelity = 1.0"), ["less than 1"]),
+    "line without its file": (
+        ("[search]", '[line]\nkind = "step_response"\n[search]'),
+        ["line.file: expected a value with kind = 'step_response', got None"],
+    ),
+    "measured line without a carrier": (
+        ("[search]", '[line]\nkind = "touchstone"\nfile = "a.s2p"\n[search]'),
+        ["drive.carrier_GHz: expected a value with a touchstone line"],
+    ),
+    "second qubit without a target": (
+        ("[search]", '[[group]]\nname = "alder-2"\noffset_MHz = 3.0\n[search]'),
+        ["group.0.target: expected this key, got none"],
+    ),
+    "second qubit with a wrong target": (
+        (
+            "[search]",
+            '[[group]]\nname = "alder-2"\noffset_MHz = 3.0\n'
+            "target = {unitary = [[[1, 0], [1, 0]], [[0, 0], [1, 0]]]}\n[search]",
+        ),
+        ["group.0.target.unitary: expected U^dag U = 1"],
+    ),
+    "rise longer than the pulse": (
+        ("[search]", "[shape]\nrise_ns = 30.0\n[search]"),
+        ["shape.rise_ns: expected less than half of pulse.duration_ns = 60, got 30"],
+    ),
+    "beyond half the sample rate": (
+        ("dac_bits = 14", "dac_bits = 14\nintermediate_MHz = 1000.0"),
+        ["drive.intermediate_MHz: expected less than half of sample_rate_MSps, got 1000"],
+    ),
+    "slopes of nothing": (
+        ('minimize = "worst"', 'minimize = "first_order"'),
+        ['search.minimize: expected a tolerance with "first_order"'],
+    ),
     "shortest without a goal": (
         ("duration_ns = 60.0", 'duration_ns = "shortest"'),
         ["pulse.duration_ns: expected search.stop_infidelity"],
     ),
 }
-# the last one also needs its goal taken out
-ALSO = {"shortest without a goal": ("stop_infidelity = 1e-9\n", "")}
+# what else has to change for a fault to stand alone
+ALSO = {
+    "shortest without a goal": [("stop_infidelity = 1e-9\n", "")],
+    "slopes of nothing": [("amplitude = 0.02\ndetuning_MHz = 0.5\n", "")],
+    "second qubit with a wrong target": [("anharmonicity_MHz = -210.0\n", "")],
+}
 
 
 @pytest.mark.parametrize("fault", FAULTS)
@@ -270,8 +306,7 @@ def test_a_bad_job_is_refused_in_one_line(fault, tmp_path, capsys, monkeypatch):
     """Exit code 2, one line that names place, expectation and what came; nothing is written."""
     change, words = FAULTS[fault]
     job = tmp_path / "job.toml"
-    changes = [change] + ([ALSO[fault]] if fault in ALSO else [])
-    job.write_text(with_changes(*changes), encoding="utf-8")
+    job.write_text(with_changes(change, *ALSO.get(fault, [])), encoding="utf-8")
     monkeypatch.chdir(tmp_path)
     assert main(["optimize", "job.toml", "--output", "out.h5"]) == WRONG_INPUT
     shown = capsys.readouterr()
