@@ -39,6 +39,11 @@ class Target:
         return STATE_SCALE if self.kind == "state" else GATE_SCALE
 
     @property
+    def measure(self) -> str:
+        """What the infidelity is called."""
+        return "One minus transfer" if self.kind == "state" else "Average gate infidelity"
+
+    @property
     def error_rows(self) -> np.ndarray:
         """[k, 4], k = 3 (exact) or 2 (free axis): orthonormal rows, zero on the accepted set."""
         inverse = conjugate(self.quaternion)

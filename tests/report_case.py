@@ -52,6 +52,8 @@ def make_case(bound="circle", target='gate = "z"\nangle_deg = 90.0', more=""):
     """A wavy pulse that is no good, the sandwich, and BB1 for x(90) (Wimperis 1994)."""
     text = JOB.format(bound=bound).replace('gate = "z"\nangle_deg = 90.0', target)
     text += more
+    if "[[group]]" in more:  # a ladder is for one qubit
+        text = text.replace("anharmonicity_MHz = -210.0\n", "")
     job = parse_job(text)
     slices = np.arange(job.slices)
     phase, size = 2.1 * np.sin(slices / 7) + slices / 11, 0.9 + 0.1 * np.cos(slices / 5)

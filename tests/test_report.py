@@ -162,7 +162,10 @@ def test_every_kind_of_target_has_a_page(target, has_theta, without_pictures):
 
 def test_a_state_target_is_drawn_too():
     target = "from_state = [0.0, 0.0, 1.0]\nto_state = [1.0, 0.0, 0.0]"
-    assert ">Over both errors<" in make_report(make_case(target=target))
+    text = make_report(make_case(target=target))
+    assert ">Over both errors<" in text
+    assert "One minus transfer, recomputed" in text
+    assert "Average gate infidelity" not in text
 
 
 def test_a_file_with_one_pulse_and_no_history_has_a_page():

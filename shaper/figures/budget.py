@@ -14,11 +14,14 @@ _LOWEST_SHOWN = 1e-12  # no bench can tell it from nothing
 
 
 @style.drawn
-def budget_figure(budget: Mapping, *, theme: style.Theme = style.LIGHT) -> Figure:
+def budget_figure(
+    budget: Mapping, *, measure: str = style.MEASURE, theme: style.Theme = style.LIGHT
+) -> Figure:
     """Infidelity by source for each pulse: a stem to a marker, the number beside it.
 
     Args:
         budget: ``source`` [k] names, and ``pulses``: name to [k] infidelity (0 or nan: none).
+        measure: what the infidelity is, see ``Target.measure``.
     """
     sources, pulses = list(budget["source"]), budget["pulses"]
     pen = style.strokes(list(pulses), theme)
@@ -62,7 +65,7 @@ def budget_figure(budget: Mapping, *, theme: style.Theme = style.LIGHT) -> Figur
     ax.set_ylim(len(sources) - 0.45, -0.55)
     ax.tick_params(axis="y", length=0)
     ax.spines["left"].set_visible(False)
-    ax.set_xlabel("Average gate infidelity")
+    ax.set_xlabel(measure)
     handles = [
         Line2D([], [], label=name, marker=pen[name].marker, markersize=5, **pen[name].line)
         for name in pulses

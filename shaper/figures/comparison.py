@@ -24,6 +24,7 @@ def comparison_figure(
     amplitude_tolerance: float = 0.0,
     detuning_tolerance_MHz: float = 0.0,
     title: str = "",
+    measure: str = style.MEASURE,
     theme: style.Theme = style.LIGHT,
 ) -> Figure:
     """Every pulse as a row on one time axis; infidelity of all against detuning and amplitude.
@@ -34,6 +35,7 @@ def comparison_figure(
         rabi_max_MHz: the bound.
         amplitude_tolerance, detuning_tolerance_MHz: half sides of the job's box, shaded.
         title: heading.
+        measure: what the infidelity is, see ``Target.measure``.
     """
     names = list(waveforms)
     figure = style.sheet(max(_LEAST, 0.9 + _ROW * len(names)))
@@ -61,7 +63,7 @@ def comparison_figure(
     rows[-1].set_xlabel(f"Time ({time_unit})")
     left.supylabel(f"I (filled) and Q (dashed) drive, W/2π ({unit})", fontsize=8.5)
     axes = right.subplots(2, 1, sharey=True)
-    draw_cuts(axes, cuts, amplitude_tolerance, detuning_tolerance_MHz, theme)
+    draw_cuts(axes, cuts, amplitude_tolerance, detuning_tolerance_MHz, measure, theme)
     handles: list[Line2D] = cut_handles(names, theme)
     style.legend_above(figure, handles, title=title)
     return figure

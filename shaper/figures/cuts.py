@@ -22,6 +22,7 @@ def cuts_figure(
     *,
     amplitude_tolerance: float = 0.0,
     detuning_tolerance_MHz: float = 0.0,
+    measure: str = style.MEASURE,
     theme: style.Theme = style.LIGHT,
 ) -> Figure:
     """Both cuts side by side on one infidelity axis.
@@ -29,10 +30,11 @@ def cuts_figure(
     Args:
         cuts: ``evidence.tables.cut_table``.
         amplitude_tolerance, detuning_tolerance_MHz: half sides of the job's box, shaded.
+        measure: what the infidelity is, see ``Target.measure``.
     """
     figure = style.sheet(2.9)
     axes = figure.subplots(1, 2, sharey=True)
-    draw_cuts(axes, cuts, amplitude_tolerance, detuning_tolerance_MHz, theme)
+    draw_cuts(axes, cuts, amplitude_tolerance, detuning_tolerance_MHz, measure, theme)
     axes[1].set_ylabel("")
     style.legend_above(figure, cut_handles(list(cuts["pulses"]), theme))
     return figure
@@ -52,6 +54,7 @@ def draw_cuts(
     cuts: Mapping,
     amplitude_tolerance: float,
     detuning_tolerance_MHz: float,
+    measure: str,
     theme: style.Theme,
 ) -> None:
     """The cut against detuning on the first axes, against amplitude on the second."""
@@ -95,4 +98,4 @@ def draw_cuts(
         ax.set_xlim(x[0], x[-1])
         ax.xaxis.set_major_locator(MaxNLocator(5))
         ax.set_xlabel(label)
-        ax.set_ylabel("Average gate infidelity")
+        ax.set_ylabel(measure)

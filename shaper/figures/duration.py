@@ -18,6 +18,7 @@ def duration_figure(
     limit_ns: float | None = None,
     stop_infidelity: float | None = None,
     others: Mapping[str, tuple[float, float]] | None = None,
+    measure: str = style.MEASURE,
     theme: style.Theme = style.LIGHT,
 ) -> Figure:
     """Best infidelity found at each duration, the time-optimal limit and other pulses as points.
@@ -27,6 +28,7 @@ def duration_figure(
         limit_ns: no pulse can be shorter; the ground before it is hatched.
         stop_infidelity: what the job asks for.
         others: pulse name to (duration_ns, infidelity).
+        measure: what the infidelity is, see ``Target.measure``.
     """
     figure = style.sheet(2.9, 0.75 * style.PAGE_WIDTH)
     ax = figure.subplots()
@@ -74,6 +76,6 @@ def duration_figure(
     style.log_infidelity_axis(ax, seen)
     ax.set_xlim(0, 1.04 * longest * factor)
     ax.set_xlabel(f"Duration ({unit})")
-    ax.set_ylabel("Average gate infidelity")
+    ax.set_ylabel(measure)
     style.legend_above(figure, handles)
     return figure

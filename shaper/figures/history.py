@@ -14,7 +14,11 @@ from shaper.figures import style
 
 @style.drawn
 def history_figure(
-    history: Mapping, *, stop_infidelity: float | None = None, theme: style.Theme = style.LIGHT
+    history: Mapping,
+    *,
+    stop_infidelity: float | None = None,
+    measure: str = style.MEASURE,
+    theme: style.Theme = style.LIGHT,
 ) -> Figure:
     """One thin line a start, bold the one that was best in the end.
 
@@ -23,6 +27,7 @@ def history_figure(
             has stages that measure differently, ``stage`` [iteration] (lines break between them);
             ``iteration`` [iteration] if not counted from 0.
         stop_infidelity: where the search may stop, drawn if given.
+        measure: what the infidelity is, see ``Target.measure``.
     """
     figure = style.sheet(2.8, 0.75 * style.PAGE_WIDTH)
     ax = figure.subplots()
@@ -60,7 +65,7 @@ def history_figure(
     ax.set_xlim(iteration[0], max(iteration[-1], iteration[0] + 1))
     ax.xaxis.set_major_locator(MaxNLocator(integer=True))
     ax.set_xlabel("Iteration")
-    ax.set_ylabel("Infidelity that was lowered" if len(borders) else "Average gate infidelity")
+    ax.set_ylabel("Infidelity that was lowered" if len(borders) else measure)
     style.legend_above(figure, handles)
     return figure
 

@@ -28,6 +28,7 @@ def map_figure(
     *,
     amplitude_tolerance: float = 0.0,
     detuning_tolerance_MHz: float = 0.0,
+    measure: str = style.MEASURE,
     theme: style.Theme = style.LIGHT,
 ) -> Figure:
     """One panel a pulse: log color scale, contours at 1e-5, 1e-4, 1e-3, the job's box.
@@ -35,6 +36,7 @@ def map_figure(
     Args:
         maps: ``evidence.tables.map_table``.
         amplitude_tolerance, detuning_tolerance_MHz: half sides of the job's box.
+        measure: what the infidelity is, see ``Target.measure``.
     """
     names = list(maps["infidelity"])
     columns = min(_PANELS_IN_ROW, len(names))
@@ -82,7 +84,7 @@ def map_figure(
         below[-1].set_xlabel(f"Detuning ({unit})")
         below[-1].tick_params(labelbottom=True)
     bar = figure.colorbar(mesh, ax=panels, extend="both", aspect=28, pad=0.02)
-    bar.set_label("Average gate infidelity")
+    bar.set_label(measure)
     bar.ax.minorticks_off()
     bar.ax.yaxis.set_major_formatter(style.decade)
     bar.outline.set_visible(False)

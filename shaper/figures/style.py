@@ -30,6 +30,7 @@ from shaper.errors import InputError
 
 SUFFIXES = (".svg", ".pdf", ".png")
 PAGE_WIDTH = 7.2  # inches: the text width of a page
+MEASURE = "Average gate infidelity"  # what an infidelity is, unless the target says otherwise
 _PNG_DPI = 200
 _LEGEND_HANDLE = 0.65  # inches a legend entry takes beside its text
 _LEGEND_LETTER = 0.072  # inches a letter

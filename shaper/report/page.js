@@ -231,6 +231,7 @@
       byId(`${id}-shown`).textContent = text.replace("-", "−");
       byId(id).setAttribute("aria-valuetext", text);
     }
+    for (const place of document.querySelectorAll(".measure")) place.textContent = addressed.measure;
     show("first", data.pulses[0].name, data.pulses[0], addressed, eps, delta);
     show("second", name, pulse, target, eps, delta);
   }

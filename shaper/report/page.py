@@ -171,8 +171,8 @@ def _table(report: Report) -> str:
 <div class="wide" tabindex="0" role="region" aria-label="Table of all pulses">
 {pulse_table(report.rows)}
 </div>
-<p class="note">Average gate infidelity, recomputed from the DAC codes; the box is the tolerance of
-the job.</p>
+<p class="note">{escape(report.live["qubits"][0]["measure"])}, recomputed from the DAC codes; the
+box is the tolerance of the job.</p>
 <details class="note"{" open" if len(report.rows) <= _FEW else ""}><summary>Sources</summary>
 <ul class="sources">{sources}</ul></details>
 </section>"""
@@ -260,8 +260,8 @@ def _side(name: str) -> str:
         for half, ket in (("north", 0), ("south", 1))
     )
     return f"""<div class="side {name}"><h3 id="{name}-name"></h3>
-<p class="value"><output id="{name}-infidelity" aria-label="Average gate infidelity"></output></p>
-<p class="note">average gate infidelity; all digits:
+<p class="value"><output id="{name}-infidelity" aria-label="Infidelity"></output></p>
+<p class="note"><span class="measure"></span>; all digits:
 <span class="digits" id="{name}-digits"></span><br>
 end at <span class="digits" id="{name}-end"></span></p>
 <div class="discs">{discs}</div></div>"""

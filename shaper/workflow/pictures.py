@@ -114,9 +114,11 @@ def pictures(found: dict, job: Job, shortest: float) -> list[Picture]:
         job: bound and tolerance are drawn into them.
         shortest: s, possible or known duration for the target.
     """
+    measure = job.target.measure
     box = {
         "amplitude_tolerance": job.amplitude_tolerance,
         "detuning_tolerance_MHz": job.detuning_tolerance / MHZ,
+        "measure": measure,
     }
     both, shown = " and ".join(found["waveform"]), ", ".join(found["map"]["infidelity"])
     edge = found["spectrum"]["frequency_MHz"][-1]
@@ -159,7 +161,10 @@ def pictures(found: dict, job: Job, shortest: float) -> list[Picture]:
                 "case, so its lines may lie higher.",
                 "How the infidelity of each start fell during the search.",
                 lambda theme: figures.history_figure(
-                    found["history"], stop_infidelity=job.stop_infidelity, theme=theme
+                    found["history"],
+                    stop_infidelity=job.stop_infidelity,
+                    measure=measure,
+                    theme=theme,
                 ),
             )
         )
@@ -174,6 +179,7 @@ def pictures(found: dict, job: Job, shortest: float) -> list[Picture]:
                     found["duration"],
                     limit_ns=shortest / NS,
                     stop_infidelity=job.stop_infidelity,
+                    measure=measure,
                     theme=theme,
                 ),
             )
@@ -185,7 +191,7 @@ def pictures(found: dict, job: Job, shortest: float) -> list[Picture]:
                 "Infidelity by each effect alone, and by all at once at the worst point of the "
                 "tolerance box.",
                 f"Error budget of {' and '.join(found['budget']['pulses'])}.",
-                lambda theme: figures.budget_figure(found["budget"], theme=theme),
+                lambda theme: figures.budget_figure(found["budget"], measure=measure, theme=theme),
             )
         )
     drawn.append(

@@ -139,6 +139,7 @@ def live_data(comparison: Comparison) -> dict:
             "qubits": [
                 {
                     "name": group.name,
+                    "measure": group.target.measure,
                     "error_rows": group.target.error_rows,
                     "scale": group.target.scale,
                     "detuning": group.detuning,
