@@ -113,13 +113,13 @@ def points_for(reach: float, least: int = SCORE_POINTS, per_radian: float = SCOR
 
     Args:
         reach: rad.
-        least: odd; enough up to ``least / per_radian``.
+        least: odd, above 1; enough up to a reach of ``(least - 1) / per_radian``.
         per_radian: 8 for a percent; less where a coarse grid only has to lead the way.
     Source:
         Bernstein's inequality for functions of exponential type: R. P. Boas, Entire Functions
         (1954), chapter 11.
     """
-    steps = max(0, math.ceil(2 * math.log2(max(per_radian * reach, 1e-9) / least) - 1e-9))
+    steps = max(0, math.ceil(2 * math.log2(max(per_radian * reach, 1e-9) / (least - 1)) - 1e-9))
     return 2 * math.ceil((least - 1) * 2 ** (steps / 2) / 2 - 1e-9) + 1
 
 

@@ -8,6 +8,7 @@ import re
 import tomllib
 from dataclasses import dataclass, replace
 from pathlib import Path
+from typing import get_args
 
 import numpy as np
 from pydantic import BaseModel, ValidationError
@@ -390,6 +391,7 @@ def _known_keys(loc: tuple) -> list[str]:
     for part in loc[:-1]:
         field = model.model_fields.get(str(part))
         inner = field.annotation if field is not None else None
+        inner = next(iter(get_args(inner)), inner)  # the items of a list
         if isinstance(inner, type) and issubclass(inner, BaseModel):
             model = inner
     return list(model.model_fields)
