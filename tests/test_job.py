@@ -296,7 +296,10 @@ FAULTS = {
 # what else has to change for a fault to stand alone
 ALSO = {
     "shortest without a goal": [("stop_infidelity = 1e-9\n", "")],
-    "slopes of nothing": [("amplitude = 0.02\ndetuning_MHz = 0.5\n", "")],
+    "slopes of nothing": [
+        ("amplitude = 0.02\ndetuning_MHz = 0.5\n", ""),
+        ("anharmonicity_MHz = -210.0\n", ""),
+    ],
     "second qubit with a wrong target": [("anharmonicity_MHz = -210.0\n", "")],
 }
 
