@@ -10,7 +10,7 @@ import numpy as np
 
 from shaper.bench import points_for
 from shaper.drive import dac
-from shaper.drive.line import CHANGE_WHEN_DOUBLED, cells_needed
+from shaper.drive.line import CHANGE_WHEN_DOUBLED, cells_needed, inverse
 from shaper.errors import InputError
 from shaper.evidence import independent
 from shaper.evidence.budget import SOURCES, Budget, Effects, error_budget
@@ -146,18 +146,15 @@ def check_claims(
 ) -> tuple[Claim, ...]:
     """Every stored infidelity of one pulse beside its recomputation, without decay.
 
-    The figures are those of the model that the search had: behind the path that it saw, on the
-    levels that it saw, of the addressed qubit and the others together.
+    The figures are those at the qubit, behind the whole path; on the levels that the search saw;
+    of the addressed qubit and the others together.
     """
     path = effects.path
-    if effects.correction != "model":
-        path = replace(path, line=None)
-    floats = np.repeat(pulse.drive, pulse.samples, axis=0)
     claims = []
     for label, samples, claimed in (
         (
             "float",
-            path.to_play(floats, pulse.sample_rate),
+            _without_grain(pulse, effects),
             (score.nominal, score.mean, score.worst),
         ),
         (
@@ -266,6 +263,16 @@ def _chosen(waveform: Waveform, names: Sequence[str]) -> list[str]:
             )
     optimized = [n for n, pulse in waveform.pulses.items() if pulse.origin == "optimized"]
     return list(names) or optimized or list(waveform.pulses)
+
+
+def _without_grain(pulse: Pulse, effects: Effects) -> np.ndarray:
+    """[sample, 2] rad/s: what the DAC would play if it had no grain."""
+    path = effects.path
+    spread = np.repeat(pulse.drive, pulse.samples, axis=0)
+    if path.line is not None and effects.correction == "inverse":
+        extra = int(pulse.samples[-1])  # the last segment is time to cut the tail short
+        spread = inverse(path.line, spread[:-extra], 1 / pulse.sample_rate, extra)
+    return path.to_play(spread, pulse.sample_rate)
 
 
 def _at_qubit(path, samples, sample_rate, cells):
