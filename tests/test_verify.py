@@ -15,7 +15,7 @@ from shaper.drive.mixer import Calibration
 from shaper.drive.path import Path as BenchPath
 from shaper.errors import InputError
 from shaper.evidence import independent
-from shaper.evidence.budget import Effects, error_budget
+from shaper.evidence.budget import SOURCES, Effects, error_budget
 from shaper.evidence.score import score
 from shaper.job import parse_job
 from shaper.physics import decay, noise
@@ -284,6 +284,31 @@ def test_calibrated_mixer_costs_nothing(pulse, job):
     assert all(claim.holds for claim in float_claims)
 
 
+def test_intermediate_frequency_has_its_own_entry(pulse, job):
+    """What turns within a held sample is not the search's fault."""
+    path = BenchPath(intermediate_frequency=100e6)
+    played = path.to_play(0.9 * np.repeat(pulse.drive, pulse.samples, axis=0), 1e9)
+    through = make_pulse(
+        played,
+        np.ones(60, int),
+        full_scale=FULL,
+        bits=14,
+        bound="circle",
+        sample_rate=1e9,
+        origin="optimized",
+    )
+    through = type(pulse)(**{**through.__dict__, "drive": 0.9 * pulse.drive})
+    target = gate_of(0.9 * pulse.drive)
+    budget = error_budget(through, target, Effects(path=path, cells=16))
+    assert budget.alone["search"] < CLOSE
+    assert 1e-8 < budget.alone["mixer"] < 1e-3
+    assert budget.dominating == "mixer"
+
+
+def gate_of(drive):
+    return Target(propagate(drive, np.full(len(drive), NS), 0.0, 0.0))
+
+
 def make_same(pulse, bits):
     return make_pulse(
         pulse.drive,
@@ -354,7 +379,7 @@ def test_command_on_a_false_file(tmp_path, waveform, capsys):
 def test_verify_from_python(waveform):
     found = verify(waveform, ["all"])
     again = with_evidence(waveform, found)
-    assert again.evidence["budget"].values.shape == (1, 10)
+    assert again.evidence["budget"].values.shape == (1, len(SOURCES))
     assert set(again.pulses) == set(waveform.pulses)
     with pytest.raises(InputError):
         verify(waveform, ["nothing"])

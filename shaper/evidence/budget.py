@@ -27,6 +27,7 @@ AGREES = 0.2  # relative; sum of the entries against the full simulation
 SOURCES = (
     "search",
     "quantization",
+    "mixer",
     "line",
     "grid",
     "leakage",
@@ -39,6 +40,7 @@ SOURCES = (
 REMEDIES = {
     "search": "more starts or iterations, or a longer pulse",
     "quantization": "the code polish, or more bits",
+    "mixer": "a lower intermediate frequency, or a faster clock: samples turn while held",
     "line": "the line in the model of the search",
     "grid": "more cells a slice",
     "leakage": "a search on the ladder, or a longer, smoother pulse",
@@ -171,12 +173,16 @@ class _Bench:
         self.samples = dac.decode(pulse.codes, pulse.full_scale, pulse.bits)
         floats = np.repeat(pulse.drive, pulse.samples, axis=0)
         path = effects.path
+        behind_inverse = effects.correction == "inverse" and path.line is not None
+        self.mixes = not behind_inverse and not replace(path, line=None).straight
         self.seen = path if effects.correction == "model" else replace(path, line=None)
         self.arrived = self.through(path, self.samples, effects.cells)
-        if effects.correction == "inverse":
-            self.wanted = self.through(Path(), floats, effects.cells)
+        if behind_inverse:
+            self.unmixed = self.wanted = self.through(Path(), floats, effects.cells)
         else:
-            self.wanted = self.through(self.seen, path.to_play(floats, self.rate), effects.cells)
+            self.unmixed = self.through(Path(line=self.seen.line), floats, effects.cells)
+            played = path.to_play(floats, self.rate)
+            self.wanted = self.through(self.seen, played, effects.cells)
 
     def through(self, path, samples, cells):
         """(drive, durations) at the qubit; equal neighbors as one segment."""
@@ -207,14 +213,18 @@ class _Bench:
         effects = self.effects
         vectors, alone = {}, {}
         arrived = self.vector(*self.arrived)
-        vectors["search"] = self.vector(*self.wanted)
+        seen = self.vector(*self.wanted)
+        vectors["search"] = seen
+        if self.mixes:
+            vectors["search"] = self.vector(*self.unmixed)
+            vectors["mixer"] = seen - vectors["search"]
         if effects.path.line is None or effects.correction == "model":
-            vectors["quantization"] = arrived - vectors["search"]
+            vectors["quantization"] = arrived - seen
         elif effects.correction == "inverse":
-            vectors["line"] = arrived - vectors["search"]  # with the rounding of its codes
+            vectors["line"] = arrived - seen  # with the rounding of its codes
         else:
             codes = self.vector(*self.through(self.seen, self.samples, effects.cells))
-            vectors["quantization"] = codes - vectors["search"]
+            vectors["quantization"] = codes - seen
             vectors["line"] = arrived - codes
         if not effects.path.straight:
             vectors["grid"] = self.continuous() - arrived
