@@ -69,6 +69,8 @@ def text(comparison) -> str:
     proved = job.has_tolerance
     kind = "time-optimal" if job.bound == "circle" else "best known"
     sides = _sides(job.groups[0])
+    none = "none" if job.others else "none: nominal, mean and worst are one"
+    alone = ", for the addressed qubit alone" if job.others else ""
     decay = [
         f"{name} {time(value, 6)}" for name, value in (("T1", job.t1), ("T2", job.t2)) if value
     ]
@@ -77,10 +79,10 @@ def text(comparison) -> str:
         *([job.title] if job.title else []),
         f"target     {job.target_name}",
         f"drive      {rate(job.rabi_max, 6)} Rabi ({job.bound}), {job.dac_bits} bits",
-        f"tolerance  {sides or 'none: nominal, mean and worst are one'}",
+        f"tolerance  {sides or none}",
         *(_qubit_line(job, group) for group in job.others),
         *([f"decay      {', '.join(decay)}"] if decay else []),
-        f"limit      {time(comparison.shortest, 6)} ({kind}, without errors)",
+        f"limit      {time(comparison.shortest, 6)} ({kind}, without errors{alone})",
         "",
         _main_table(comparison),
         "",
