@@ -162,7 +162,11 @@ def test_every_kind_of_target_has_a_page(target, has_theta, without_pictures):
 
 def test_a_state_target_is_drawn_too():
     target = "from_state = [0.0, 0.0, 1.0]\nto_state = [1.0, 0.0, 0.0]"
-    text = make_report(make_case(target=target))
+    case = make_case(target=target)
+    start = live_data(compare(case))["starts"][0]
+    assert start["label"] == "from_state"
+    np.testing.assert_allclose(start["bloch"], (0, 0, 1), atol=ROUND_OFF)
+    text = make_report(case)
     assert ">Over both errors<" in text
     assert "One minus transfer, recomputed" in text
     assert "Average gate infidelity" not in text

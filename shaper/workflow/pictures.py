@@ -12,9 +12,10 @@ from shaper.evidence import tables
 from shaper.job import Job
 from shaper.pulse import Table, Waveform
 from shaper.report import Picture
+from shaper.rotation import bloch_matrix
 from shaper.units import MHZ, NS
 from shaper.wiring import arriving
-from shaper.workflow.compare import Comparison, cuts, maps
+from shaper.workflow.compare import Comparison, cuts, maps, worth_showing
 
 START_STATES = {
     "|+⟩": (1.0, 0.0, 0.0),
@@ -22,7 +23,7 @@ START_STATES = {
     "|1⟩": (0.0, 0.0, -1.0),
     "|+i⟩": (0.0, 1.0, 0.0),
 }
-_DRAWN_STATES = ("|0⟩", "|+⟩")  # more paths on one disc cannot be told apart
+_MOST_STATES = 2  # more paths on one disc cannot be told apart
 _SPECTRUM_POINTS = 1201
 _SPECTRUM_REACH = 12  # Rabi frequencies to either side
 
@@ -37,12 +38,13 @@ def figure_tables(waveform: Waveform, comparison: Comparison) -> dict:
     job, pulses = comparison.job, comparison.pulses
     first, *others = pulses
     both = {name: pulses[name] for name in [first, *(n for n in others if n == "sandwich")]}
-    plane = maps(comparison)
+    # of many pulses the ones worth a picture, in the file's order: it decides on their looks
+    shown = [name for name in pulses if name in worth_showing(comparison)]
+    plane = maps(comparison, shown)
     lines = cuts(comparison)
-    # of many pulses the ones worth a picture
-    lines["pulses"] = {name: lines["pulses"][name] for name in plane["infidelity"]}
+    lines["pulses"] = {name: lines["pulses"][name] for name in shown}
     frequency = np.linspace(-1, 1, _SPECTRUM_POINTS) * _SPECTRUM_REACH * job.rabi_max
-    starts = {label: START_STATES[label] for label in _DRAWN_STATES}
+    starts = dict(list(start_states(job).items())[:_MOST_STATES])
     found = {
         "waveform": {name: tables.waveform_table(pulse) for name, pulse in both.items()},
         "cuts": lines,
@@ -56,6 +58,14 @@ def figure_tables(waveform: Waveform, comparison: Comparison) -> dict:
         "budget": budget_table(waveform),
     }
     return {name: table for name, table in found.items() if table is not None}
+
+
+def start_states(job: Job) -> dict[str, tuple[float, ...]]:
+    """Bloch vectors to follow, by label; the one that the target speaks of comes first."""
+    if job.target.kind != "state":
+        return START_STATES
+    start = bloch_matrix(job.target.quaternion).T @ job.target.free_axis
+    return {"from_state": tuple(map(float, start)), **START_STATES}
 
 
 def history_table(waveform: Waveform) -> dict | None:
@@ -198,7 +208,7 @@ def pictures(found: dict, job: Job, shortest: float) -> list[Picture]:
         _drawn(
             "Way of the Bloch vector",
             "Lambert's equal-area discs, one a hemisphere, without errors.",
-            f"Bloch vectors from {' and '.join(_DRAWN_STATES)} during {both}.",
+            f"Bloch vectors during {both}, two start states each.",
             lambda theme: figures.disc_figure(found["discs"], theme=theme),
             paper_only=True,
         )

@@ -19,7 +19,7 @@ from shaper.units import DEG, MHZ
 from shaper.wiring import arriving, path_of
 from shaper.workflow.check import check_job
 from shaper.workflow.compare import Comparison, as_json, compare
-from shaper.workflow.pictures import START_STATES, figure_tables, pictures
+from shaper.workflow.pictures import figure_tables, pictures, start_states
 
 _SLIDER_REACH = 5  # tolerances
 _SLIDER_DEFAULT = 0.1  # of the drive, where there is no tolerance
@@ -162,7 +162,7 @@ def live_data(comparison: Comparison) -> dict:
                 if degrees is not None and has_sandwich and path_of(job).straight
                 else None
             ),
-            "starts": [{"label": k, "bloch": v} for k, v in START_STATES.items()],
+            "starts": [{"label": k, "bloch": v} for k, v in start_states(job).items()],
             "pulses": [_arriving(job, name, pulse) for name, pulse in comparison.pulses.items()],
         }
     )
