@@ -259,7 +259,7 @@ def draw(comparison: Comparison, path: str | Path) -> list[Path]:
         table = cuts(comparison, group)
         table["pulses"] = {name: table["pulses"][name] for name in names}
         written.append(_beside(path, group))
-        save(cuts_figure(table, **_box_and_measure(group)), written[-1])
+        save(cuts_figure(table, **_box_and_measure(group, comparison.job)), written[-1])
     return written
 
 
@@ -280,7 +280,7 @@ def picture(comparison: Comparison):
         {name: waveform_table(comparison.pulses[name]) for name in names},
         table,
         rabi_max_MHz=job.rabi_max / MHZ,
-        **_box_and_measure(job.groups[0]),
+        **_box_and_measure(job.groups[0], job),
         title=job.title,
     )
 
@@ -292,7 +292,10 @@ def draw_maps(comparison: Comparison, path: str | Path) -> list[Path]:
     written = []
     for group in comparison.job.groups:
         written.append(Path(path) if not written else _beside(path, group))
-        save(map_figure(maps(comparison, group=group), **_box_and_measure(group)), written[-1])
+        save(
+            map_figure(maps(comparison, group=group), **_box_and_measure(group, comparison.job)),
+            written[-1],
+        )
     return written
 
 
@@ -304,10 +307,10 @@ def _beside(path: str | Path, group: Group) -> Path:
     )
 
 
-def _box_and_measure(group: Group) -> dict:
-    """Keywords for the figures."""
+def _box_and_measure(group: Group, job: Job) -> dict:
+    """Keywords for the figures; of several qubits the measure says whose it is."""
     return {
         "amplitude_tolerance": group.amplitude_tolerance,
         "detuning_tolerance_MHz": group.detuning_tolerance / MHZ,
-        "measure": group.target.measure,
+        "measure": group.target.measure + (f", {group.name}" if job.others else ""),
     }
