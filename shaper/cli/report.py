@@ -49,8 +49,7 @@ def run(args) -> int:
     from pathlib import Path
 
     from shaper.store import load_waveform
-    from shaper.store.atomic import replace_file
-    from shaper.workflow.report import make_report, report_json
+    from shaper.workflow.report import make_report, report_json, write_report
 
     source = Path(args.file)
     waveform = load_waveform(source)
@@ -58,11 +57,10 @@ def run(args) -> int:
     if args.json:
         print(json.dumps(report_json(waveform, args.against, folder)))
         return 0
-    page = make_report(waveform, source.name, args.against, folder)
     if args.output == "-":
-        sys.stdout.write(page)
+        sys.stdout.write(make_report(waveform, source.stem, args.against, folder))
         return 0
     output = Path(args.output) if args.output else source.with_suffix(".html")
-    replace_file(output, page.encode("utf-8"))
+    write_report(waveform, output, args.against, folder)
     print(output)
     return 0
