@@ -149,7 +149,7 @@ def test_integrator_follows_the_line(rng):
     """The continuous waveform and its cell means meet, as the square of the cell."""
     samples, line = rng.normal(0, 10 * MHZ, (12, 2)), first_order(80e6)
     until = 12 * NS + line.reach
-    exact = independent.integrated(line, samples, 1e9, until, 0.02, MHZ)
+    exact = independent.integrated(line, samples, 1e9, 0.0, until, 0.02, MHZ)
     gaps = []
     for cells in (4, 8):
         kernel = taps(line, NS, cells)

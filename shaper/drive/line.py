@@ -184,12 +184,16 @@ class Taps:
 
 def taps(line: Line, slice_duration: float, cells: int) -> Taps:
     """The line's answer to one slice, as means over ``cells`` equal cells a slice."""
-    lead = int(np.ceil(line.lead / slice_duration - 1e-9))
-    tail = int(np.ceil(line.reach / slice_duration - 1e-9))
+    lead, tail = whole(line.lead / slice_duration), whole(line.reach / slice_duration)
     edges = np.arange((lead + tail + 1) * cells + 1) / cells - lead
     area = line.ramp(edges * slice_duration) - line.ramp((edges - 1) * slice_duration)
     kernel = np.diff(area) * cells / slice_duration
     return Taps(np.asarray(kernel, dtype=complex).reshape(-1, cells), lead)
+
+
+def whole(count: float) -> int:
+    """Rounded up, but for round-off."""
+    return int(np.ceil(count - 1e-9))
 
 
 def filtered(kernel: np.ndarray, drive: np.ndarray) -> np.ndarray:

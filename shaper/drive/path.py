@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from shaper.drive import mixer
-from shaper.drive.line import Line, filtered, taps
+from shaper.drive.line import Line, filtered, taps, whole
 
 
 @dataclass(frozen=True)
@@ -56,8 +56,21 @@ class Path:
                 phase=self.phase,
             )
         if self.line is not None:
-            drive = filtered(taps(self.line, 1 / rate, 1).kernel, drive)
+            kernel = taps(self.line, 1 / rate, 1)
+            drive = filtered(kernel.kernel, drive)
+            # begin and end on whole samples: how long the qubit is left to its detuning must not
+            # depend on the cells
+            before, after = self.margins(sample_rate)
+            tail = kernel.added - kernel.lead
+            idle = (before * cells - kernel.lead, after * cells - tail)
+            drive = np.pad(drive, (idle, (0, 0)))
         return drive, 1 / rate
+
+    def margins(self, sample_rate: float) -> tuple[int, int]:
+        """Whole samples by which the answer begins before and ends after those played."""
+        if self.line is None:
+            return 0, 0
+        return whole(self.line.lead * sample_rate), whole(self.line.reach * sample_rate)
 
     def to_play(self, drive: np.ndarray, sample_rate: float) -> np.ndarray:
         """What to play for ``drive`` to leave the mixer on the carrier; no bound is applied.

@@ -259,9 +259,15 @@ class _Bench:
         path = self.effects.path
         followed = path.line is not None and path.calibration is None
         if followed and not path.intermediate_frequency and not self.effects.on_ladder:
-            until = len(self.samples) / self.rate + path.line.reach
+            before, after = path.margins(self.rate)
             unitary = independent.integrated(
-                path.line, self.samples, self.rate, until, 0.0, self.effects.detuning
+                path.line,
+                self.samples,
+                self.rate,
+                -before / self.rate,
+                (len(self.samples) + after) / self.rate,
+                0.0,
+                self.effects.detuning,
             )
             return independent.rotation_error(unitary, self.target)
         return self.vector(*self.through(path, self.samples, _FINER * self.effects.cells))

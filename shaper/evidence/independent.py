@@ -141,6 +141,7 @@ def integrated(
     line: Line,
     samples: np.ndarray,
     sample_rate: float,
+    begin: float,
     until: float,
     eps: float = 0.0,
     delta: float = 0.0,
@@ -149,7 +150,7 @@ def integrated(
 
     Args:
         samples: [sample, 2] rad/s.
-        until: s after the first sample begins at which the gate is over.
+        begin, until: s from the first sample's edge, between which the qubit is followed.
     """
     edges = np.diff(np.vstack([np.zeros(2), samples, np.zeros(2)]), axis=0) @ np.array([1, 1j])
     starts = np.arange(len(edges)) / sample_rate
@@ -160,9 +161,10 @@ def integrated(
         return (-1j * h @ y.reshape(2, 2)).ravel()
 
     u = np.eye(2, dtype=complex).ravel()
-    stops = np.unique(np.concatenate([[-line.lead], starts - line.lead, starts, [until]]))
-    for begin, end in zip(stops[:-1], stops[1:], strict=True):
-        u = solve_ivp(slope, (begin, end), u, method="DOP853", rtol=1e-11, atol=1e-13).y[:, -1]
+    stops = np.unique(np.concatenate([[begin, until], starts - line.lead, starts]))
+    stops = stops[(stops >= begin) & (stops <= until)]
+    for start, end in zip(stops[:-1], stops[1:], strict=True):
+        u = solve_ivp(slope, (start, end), u, method="DOP853", rtol=1e-11, atol=1e-13).y[:, -1]
     return u.reshape(2, 2)
 
 
