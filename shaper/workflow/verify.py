@@ -11,6 +11,7 @@ import numpy as np
 from shaper.bench import points_for
 from shaper.drive import dac
 from shaper.drive.line import CHANGE_WHEN_DOUBLED, cells_needed, inverse
+from shaper.drive.path import Path as BenchPath
 from shaper.errors import InputError
 from shaper.evidence import independent
 from shaper.evidence.budget import SOURCES, Budget, Effects, error_budget
@@ -24,7 +25,9 @@ from shaper.wiring import path_of
 RELATIVE = 0.01  # how far a claim may be off; grids differ, physics does not
 RELATIVE_WORST = 0.03  # the same for a maximum, which a coarse grid may miss by a hair
 GRID = 2 * CHANGE_WHEN_DOUBLED  # infidelity; what two grids behind a line may differ by
+_RESOLUTION = independent.RESOLUTION
 _HERTZ_SQUARED = (2 * np.pi) ** 2  # (rad/s)^2
+_FEWEST_CELLS = 8  # per sample behind a line; enough for a perfect pulse is few for a robust one
 _CELLS_WITHOUT_LINE = 16  # per sample, where skew or an intermediate frequency turn within one
 _WORST_POINTS, _WORST_DENSITY = 13, 5.0  # per axis at least, and per rad of reach; evenly spaced
 _MEAN_POINTS, _MEAN_DENSITY = 9, 2.0  # the same, Gauss-Legendre
@@ -139,7 +142,7 @@ def _cells(pulse: Pulse, effects: Effects) -> int:
     if path.line is None:
         return _CELLS_WITHOUT_LINE
     floats = np.repeat(pulse.drive, pulse.samples, axis=0)
-    return cells_needed(path.line, floats, 1 / pulse.sample_rate)
+    return max(_FEWEST_CELLS, cells_needed(path.line, floats, 1 / pulse.sample_rate))
 
 
 def check_claims(
@@ -169,12 +172,11 @@ def check_claims(
         for kind, stored, value in zip(("nominal", "mean", "worst"), claimed, found, strict=True):
             if not np.isnan(stored):
                 near = RELATIVE_WORST if kind == "worst" else RELATIVE
-                grid = 0.0 if path.straight else GRID + 2 * np.sqrt(value * GRID)
-                holds = _agree(stored, value, near, grid)
+                holds = _agree(stored, value, near, _grid(path, value))
                 claims.append(Claim(f"{label}, {kind}", stored, value, holds))
         if label == "codes" and score.guaranteed is not None:
-            above = score.guaranteed >= found[2] - independent.RESOLUTION
-            claims.append(Claim("codes, guaranteed", score.guaranteed, found[2], above))
+            above = score.guaranteed >= found[2] - max(_grid(path, found[2]), _RESOLUTION)
+            claims.append(Claim("codes, guaranteed", score.guaranteed, found[2], bool(above)))
     return tuple(claims)
 
 
@@ -331,6 +333,10 @@ def _figures(drive, durations, target, effects) -> tuple[float, float, float]:
     return nominal, mean, max(float(np.max(lost(even))), nominal)
 
 
+def _grid(path: BenchPath, infidelity: float) -> float:
+    """What two grids of cells behind a path may differ by: their errors add to the pulse's own."""
+    return 0.0 if path.straight else float(GRID + 2 * np.sqrt(infidelity * GRID))
+
+
 def _agree(claimed: float, found: float, relative: float, grid: float) -> bool:
-    resolution = max(grid, independent.RESOLUTION)
-    return bool(abs(claimed - found) <= relative * max(claimed, found) + resolution)
+    return abs(claimed - found) <= relative * max(claimed, found) + max(grid, _RESOLUTION)
