@@ -201,6 +201,16 @@ def test_the_stored_budget_is_drawn_and_the_second_opinion_told(without_pictures
     budget_figure(table)
 
 
+def test_pulses_too_long_for_a_page_have_no_panel(without_pictures, monkeypatch):
+    monkeypatch.setattr("shaper.workflow.report._MOST_SEGMENTS", 10)
+    names = [pulse["name"] for pulse in live_data(compare(make_case()))["pulses"]]
+    assert names == ["sandwich", "bb1"]
+    monkeypatch.setattr("shaper.workflow.report._MOST_SEGMENTS", 0)
+    text = make_report(make_case())
+    assert "<script" not in text and "script-src 'none'" in text
+    assert "too long for a live panel" in text
+
+
 def test_the_curve_of_the_shortest_duration_is_drawn():
     case = make_case()
     axes = ("duration_s",)

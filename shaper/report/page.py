@@ -48,7 +48,8 @@ class Report:
         rows: one dict a pulse, keys as in ``workflow.compare.as_json``.
         facts: term and description, in order: what was asked.
         pictures: in order.
-        live: the data of the live panel, see ``workflow.report.live_data``.
+        measure: what the infidelities are.
+        live: the data of the live panel, see ``workflow.report.live_data``; None for no panel.
         cautions: sentences.
         job_text: TOML.
         provenance: term and description, in order.
@@ -59,7 +60,8 @@ class Report:
     rows: Sequence[Mapping]
     facts: Mapping[str, str]
     pictures: Sequence[Picture]
-    live: Mapping
+    measure: str
+    live: Mapping | None
     cautions: Sequence[str]
     job_text: str
     provenance: Mapping[str, str]
@@ -72,10 +74,11 @@ def report_page(report: Report) -> str:
     pictures from within the page, and no connection at all.
     """
     style = _colors() + _own("page.css")
-    script = _own("page.js")
+    script = _own("page.js") if report.live else ""
+    allowed = f"'{_hash(script)}'" if script else "'none'"
     policy = (
         "default-src 'none'; "
-        f"script-src '{_hash(script)}'; style-src '{_hash(style)}'; "
+        f"script-src {allowed}; style-src '{_hash(style)}'; "
         "img-src data:; base-uri 'none'; form-action 'none'"
     )
     pictures = "\n".join(_picture(picture) for picture in report.pictures)
@@ -112,10 +115,16 @@ def report_page(report: Report) -> str:
 </section>
 </main>
 <footer>This page holds all its data and asks the network for nothing.</footer>
-<script type="application/json" id="live-data">{_data(report.live)}</script>
-<script>{script}</script>
-</body>
+{_scripts(report.live, script)}</body>
 </html>
+"""
+
+
+def _scripts(live: Mapping | None, script: str) -> str:
+    if not live:
+        return ""
+    return f"""<script type="application/json" id="live-data">{_data(live)}</script>
+<script>{script}</script>
 """
 
 
@@ -171,7 +180,7 @@ def _table(report: Report) -> str:
 <div class="wide" tabindex="0" role="region" aria-label="Table of all pulses">
 {pulse_table(report.rows)}
 </div>
-<p class="note">{escape(report.live["qubits"][0]["measure"])}, recomputed from the DAC codes; the
+<p class="note">{escape(report.measure)}, recomputed from the DAC codes; the
 box is the tolerance of the job.</p>
 <details class="note"{" open" if len(report.rows) <= _FEW else ""}><summary>Sources</summary>
 <ul class="sources">{sources}</ul></details>
@@ -203,8 +212,10 @@ def _points_wide(svg: bytes) -> float:
     return float(found.group(1))
 
 
-def _live(live: Mapping) -> str:
+def _live(live: Mapping | None) -> str:
     """The panel; hidden until the script has drawn it."""
+    if live is None:
+        return '<p class="note">These pulses are too long for a live panel.</p>'
     options = "".join(
         f'<option value="{k}">{escape(pulse["name"])}</option>'
         for k, pulse in enumerate(live["pulses"])

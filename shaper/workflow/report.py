@@ -23,6 +23,7 @@ from shaper.workflow.check import check_job
 from shaper.workflow.compare import Comparison, as_json, compare
 from shaper.workflow.pictures import figure_tables, pictures, start_states
 
+_MOST_SEGMENTS = 200_000  # of a pulse in the live panel: tens of megabytes, a tenth of a second
 _SLIDER_REACH = 5  # tolerances
 _SLIDER_DEFAULT = 0.1  # of the drive, where there is no tolerance
 _CAUTIONS = (
@@ -61,6 +62,7 @@ def make_report(
             rows=numbers["pulses"],
             facts=_facts(comparison, facts),
             pictures=pictures(figure_tables(waveform, comparison), job, comparison.shortest),
+            measure=job.target.measure,
             live=live_data(comparison),
             cautions=[*_CAUTIONS, *facts["warnings"]],
             job_text=waveform.job_text,
@@ -137,20 +139,25 @@ def _verified(waveform: Waveform) -> dict[str, str]:
 # --- the live panel ---------------------------------------------------------------------------
 
 
-def live_data(comparison: Comparison) -> dict:
+def live_data(comparison: Comparison) -> dict | None:
     """What the script in the page computes from, SI inside, JSON-ready.
 
     ``pulses`` as the codes arrive at the qubit (``rates`` [run][2] rad/s, ``durations`` [run] s,
-    line and mixer included where the job has them), the target
-    of each qubit as error rows and scale, the drive, start states, and the reach of each slider.
+    line and mixer included where the job has them), the target of each qubit as error rows and
+    scale, the drive, start states, and the reach of each slider. Pulses of more segments than a
+    page can follow are left out; None if no pulse is left.
     """
     job = comparison.job
+    pulses = [_arriving(job, name, pulse) for name, pulse in comparison.pulses.items()]
+    pulses = [pulse for pulse in pulses if len(pulse["durations"]) <= _MOST_SEGMENTS]
+    if not pulses:
+        return None
     target = job.target
     angle = target.z_angle if target.kind == "gate" and target.free_axis is None else None
     unit, unit_name = (MHZ, "MHz") if job.rabi_max >= MHZ else (MHZ / 1e3, "kHz")
     percent = _slider(100 * (_SLIDER_REACH * job.amplitude_tolerance or _SLIDER_DEFAULT))
     reach = _SLIDER_REACH * job.detuning_tolerance or _SLIDER_DEFAULT * job.rabi_max
-    has_sandwich = "sandwich" in comparison.pulses
+    has_sandwich = "sandwich" in [pulse["name"] for pulse in pulses]
     degrees = None if angle is None else float(f"{angle / DEG:.9g}")
     return tables.plain(
         {
@@ -181,7 +188,7 @@ def live_data(comparison: Comparison) -> dict:
                 else None
             ),
             "starts": [{"label": k, "bloch": v} for k, v in start_states(job).items()],
-            "pulses": [_arriving(job, name, pulse) for name, pulse in comparison.pulses.items()],
+            "pulses": pulses,
         }
     )
 
