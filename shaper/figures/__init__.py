@@ -1,5 +1,6 @@
 """Figures from tables; the only room that knows matplotlib. Nothing is computed here."""
 
+from shaper.figures.benchmark import benchmark_figure as benchmark_figure
 from shaper.figures.budget import budget_figure as budget_figure
 from shaper.figures.comparison import comparison_figure as comparison_figure
 from shaper.figures.cuts import cuts_figure as cuts_figure
