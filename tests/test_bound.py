@@ -60,6 +60,20 @@ def test_the_bound_is_reached_at_finite_parameters():
     assert np.max(np.abs(found - rim / (math.pi / 2))) < 1e-15 * 4
 
 
+@pytest.mark.parametrize("bound", ["circle", "box"])
+def test_round_off_on_the_rim_stays_inside(rng, bound):
+    """A hundred thousand points that are meant to lie on the bound itself, at any Rabi rate."""
+    angle = rng.uniform(0, 2 * math.pi, (100_000, 1))
+    if bound == "circle":
+        rim = math.pi / 2 * np.concatenate([np.cos(angle), np.sin(angle)], axis=1)
+    else:
+        rim = math.pi / 2 * np.sign(np.concatenate([np.cos(angle), np.sin(angle)], axis=1))
+    drive = np.asarray(drive_of(rim, bound))
+    assert np.max(reach(drive, bound)) <= 1.0
+    for rabi_max in (2 * math.pi * 25e6, 1.0, 0.1, 3e5 / 7):
+        assert np.max(reach(drive * rabi_max, bound)) <= rabi_max
+
+
 @settings(deadline=None, max_examples=100)
 @given(arrays(float, (SLICES, 2), elements=st.floats(-1, 1)), bounds)
 def test_parameters_are_the_inverse(drive, bound):
