@@ -263,7 +263,6 @@ def test_a_sound_job_has_no_warning():
             "search.stop_infidelity: 1e-05 is below what T1 and T2 leave",
         ),
         ([("t1_us = 60.0", "anharmonicity_MHz = -21.0")], "1.3 periods"),
-        ([("t1_us = 60.0", "anharmonicity_MHz = -210.0")], "12 % of the anharmonicity"),
         ([("rabi_max_MHz", "min_samples = 128\nrabi_max_MHz")], "68 more samples of zero (68 ns)"),
         ([("[pulse]", "[tolerance]\ndetuning_MHz = 30.0\n[pulse]")], "more than the largest Rabi"),
     ],

@@ -18,7 +18,6 @@ from shaper.workflow.trial import trial_infidelity
 _HAIR = 1e-9  # relative; a duration this close below the limit is the limit
 _COARSE_SLICE = math.pi / 2  # a slice that turns further than this can hardly follow any shape
 _TRIAL_MISSES_BY = 10.0  # the most by which the real search was seen to beat the trial, or so
-_LEAKY_MIXING = 1e-3  # of the next level; worth a word
 _LEAKY_PERIODS = 2.0  # of the anharmonicity; a pulse shorter than this excites the next level
 
 
@@ -122,7 +121,7 @@ def frame_update(job: Job) -> str | None:
 def _warnings(
     job: Job, shortest: float, padding: int, line: Line | None, reached: float | None
 ) -> list[str]:
-    found = [_frame(job), _drift(job), _line(job, line), _mixing(job), _coarse(job)]
+    found = [_frame(job), _drift(job), _line(job, line), _coarse(job)]
     if not job.find_shortest:
         found = [
             _too_short(job, shortest),
@@ -231,19 +230,6 @@ def _leakage(job: Job) -> str | None:
         return (
             f"qubit.anharmonicity_MHz: the pulse lasts {periods:.2g} periods of it; below "
             f"{_LEAKY_PERIODS:g} the next level is hard to keep empty. Lengthen the pulse"
-        )
-    return None
-
-
-def _mixing(job: Job) -> str | None:
-    if job.anharmonicity is None:
-        return None
-    mixing = (job.rabi_max / (2 * job.anharmonicity)) ** 2  # second-order perturbation
-    if mixing > _LEAKY_MIXING:
-        return (
-            f"drive.rabi_max_MHz: at {100 * job.rabi_max / abs(job.anharmonicity):.2g} % of the "
-            f"anharmonicity a pulse that does not mind the next level errs by about {mixing:.1g}. "
-            "Judge it by shaper verify, which counts that level, or lower the drive"
         )
     return None
 
