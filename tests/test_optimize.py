@@ -189,13 +189,30 @@ def test_the_offset_of_the_qubit_is_part_of_the_job(run):
 
 
 def test_a_tolerance_without_a_goal_runs_its_course_and_is_done(run):
-    search = "starts = 4\niterations = 10"
+    search = "starts = 8\niterations = 60"  # as in test_search: one compiled program
     code, out, _ = run(job_text(3 * math.pi, slices=30, tolerance=(0.05, 0.1), search=search))
     assert code == DONE
     assert "guaranteed" in out
     with h5py.File("job.h5") as file:
         attrs = dict(file["pulses/shaped"].attrs)
     assert 0 < attrs["infidelity"] <= attrs["infidelity_mean"] <= attrs["infidelity_worst"] < 0.05
+
+
+def test_the_shortest_duration_and_its_curve(run):
+    """z(90) takes 4.156 / W_max: in slices of 0.139 rad at least 30 of them."""
+    unit = 0.139
+    text = job_text(40 * unit, slices=40, search="starts = 8")
+    code, out, _ = run(text, "--shortest", "--json")
+    assert code == DONE
+    shaped = next(pulse for pulse in json.loads(out)["pulses"] if pulse["name"] == "shaped")
+    assert math.ceil(Z90_LIMIT / unit) == 30
+    assert shaped["duration_ns"] == pytest.approx(30)
+    assert recomputed("job.h5") <= GOAL
+    found = shaper.load_waveform("job.h5")
+    durations = found.history["duration_s"].values
+    infidelity = found.history["best_infidelity"].values
+    assert np.all(np.diff(durations) > 0)
+    assert durations[np.argmax(infidelity <= GOAL)] == pytest.approx(30e-9, rel=1e-9)
 
 
 # ---- refused before anything is spent
@@ -209,6 +226,8 @@ def test_a_tolerance_without_a_goal_runs_its_course_and_is_done(run):
         (("--figure", "nowhere/a.png"), "expected an existing folder, nowhere is none"),
         (("--figure", "a.bmp"), "a.bmp"),
         (("--resume",), "expected a checkpoint"),
+        (("--output", "job.toml"), "expected another file than the job itself"),
+        (("--output", "./job.toml"), "expected another file than the job itself"),
     ],
 )
 def test_wrong_use_is_refused_before_the_search(run, tmp_path, monkeypatch, option, words):
@@ -221,6 +240,14 @@ def test_wrong_use_is_refused_before_the_search(run, tmp_path, monkeypatch, opti
     assert out == ""
     assert words in err
     assert err.count("\n") == 1
+    assert [path.name for path in tmp_path.iterdir()] == ["job.toml"]
+    assert (tmp_path / "job.toml").read_text(encoding="utf-8") == job_text(ENOUGH)
+
+
+def test_shortest_needs_a_goal(run, tmp_path):
+    code, out, err = run(job_text(ENOUGH, tolerance=(0.05, 0.1)), "--shortest")
+    assert (code, out) == (WRONG_INPUT, "")
+    assert "--shortest needs search.stop_infidelity" in err
     assert [path.name for path in tmp_path.iterdir()] == ["job.toml"]
 
 

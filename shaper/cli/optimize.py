@@ -63,6 +63,9 @@ def run(args) -> int:
     _require_writable("--output", output)
     if args.figure:
         _require_figure(Path(args.figure))
+    for option, path in (("--output", output), ("--figure", args.figure)):
+        if path and os.path.exists(path) and os.path.samefile(path, args.job):
+            raise InputError(f"{option} {path}: expected another file than the job itself")
     from shaper.search.checkpoint import Checkpoint
     from shaper.store import save_waveform
     from shaper.store.atomic import replace_file
