@@ -25,12 +25,14 @@ from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.colors import LinearSegmentedColormap
 from matplotlib.figure import Figure
 from matplotlib.ticker import LogLocator, NullFormatter
+from PIL import Image
 
 from shaper.errors import InputError
 
 SUFFIXES = (".svg", ".pdf", ".png")
 PAGE_WIDTH = 7.2  # inches: the text width of a page
 MEASURE = "Average gate infidelity"  # what an infidelity is, unless the target says otherwise
+_PALETTE = 256  # colors of a bitmap
 _PNG_DPI = 200
 _LEGEND_HANDLE = 0.65  # inches a legend entry takes beside its text
 _LEGEND_LETTER = 0.072  # inches a letter
@@ -289,6 +291,15 @@ def encoded(figure: Figure, suffix: str, theme: Theme = LIGHT) -> bytes:
     out = BytesIO()
     with _styled(theme):
         figure.savefig(out, format=suffix[1:], dpi=_PNG_DPI, metadata=undated)
+    return _fewer_colors(out.getvalue()) if suffix == ".png" else out.getvalue()
+
+
+def _fewer_colors(bitmap: bytes) -> bytes:
+    """The same PNG on a palette: a third of the size, no difference to the eye."""
+    out = BytesIO()
+    with Image.open(BytesIO(bitmap)) as image:
+        flat = image.convert("RGB").quantize(_PALETTE, dither=Image.Dither.NONE)
+        flat.save(out, format="PNG", optimize=True, dpi=(_PNG_DPI, _PNG_DPI))
     return out.getvalue()
 
 
