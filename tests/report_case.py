@@ -14,7 +14,6 @@ JOB = """title = "Quarter-turn phase gate, Alder bench, alder-1 <&>"
 detuning_MHz = 0.1
 t1_us = 60.0
 t2_us = 45.0
-anharmonicity_MHz = -210.0
 
 [drive]
 rabi_max_MHz = 25.0
@@ -48,12 +47,14 @@ target = { gate = "identity", equivalence = "up_to_final_z" }
 """
 
 
-def make_case(bound="circle", target='gate = "z"\nangle_deg = 90.0', more=""):
+def make_case(
+    bound="circle", target='gate = "z"\nangle_deg = 90.0', more="", anharmonicity_MHz=None
+):
     """A wavy pulse that is no good, the sandwich, and BB1 for x(90) (Wimperis 1994)."""
     text = JOB.format(bound=bound).replace('gate = "z"\nangle_deg = 90.0', target)
     text += more
-    if "[[group]]" in more:  # a ladder is for one qubit
-        text = text.replace("anharmonicity_MHz = -210.0\n", "")
+    if anharmonicity_MHz is not None:
+        text = text.replace("[drive]", f"anharmonicity_MHz = {anharmonicity_MHz}\n\n[drive]")
     job = parse_job(text)
     slices = np.arange(job.slices)
     phase, size = 2.1 * np.sin(slices / 7) + slices / 11, 0.9 + 0.1 * np.cos(slices / 5)

@@ -19,7 +19,7 @@ from shaper.pulse import Table
 from shaper.report.parts import pulse_table, typeset
 from shaper.store import save_waveform
 from shaper.target import infidelity
-from shaper.workflow.compare import as_json, compare
+from shaper.workflow.compare import as_json, compare, cuts
 from shaper.workflow.notebook import attach, comparison_html, waveform_html
 from shaper.workflow.pictures import budget_table, duration_table, figure_tables, pictures
 from shaper.workflow.report import live_data, make_report
@@ -201,6 +201,21 @@ def test_the_stored_budget_is_drawn_and_the_second_opinion_told(without_pictures
     budget_figure(table)
 
 
+def test_a_job_with_levels_shows_what_all_levels_make_of_it(without_pictures):
+    case = make_case(anharmonicity_MHz=-210.0)
+    comparison = compare(case)
+    assert live_data(comparison) is None
+    table = cuts(comparison)
+    for row in comparison.rows:
+        middle = table["pulses"][row.name]["against_amplitude"][len(table["amplitude_error"]) // 2]
+        assert middle == pytest.approx(row.levels.nominal, rel=1e-9)
+        assert abs(row.nominal - row.levels.nominal) > 1e-5  # not what two levels give
+    text = make_report(case)
+    head = re.findall(r'<th scope="col">(.*?)</th>', text)
+    assert "leakage" in head and "infidelity, nominal" not in head
+    assert "No live panel" in text
+
+
 def test_pulses_too_long_for_a_page_have_no_panel(without_pictures, monkeypatch):
     monkeypatch.setattr("shaper.workflow.report._MOST_SEGMENTS", 10)
     names = [pulse["name"] for pulse in live_data(compare(make_case()))["pulses"]]
@@ -208,7 +223,7 @@ def test_pulses_too_long_for_a_page_have_no_panel(without_pictures, monkeypatch)
     monkeypatch.setattr("shaper.workflow.report._MOST_SEGMENTS", 0)
     text = make_report(make_case())
     assert "<script" not in text and "script-src 'none'" in text
-    assert "too long for a live panel" in text
+    assert "No live panel" in text
 
 
 def test_the_curve_of_the_shortest_duration_is_drawn():

@@ -7,7 +7,7 @@ here and null in JSON.
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 
 import numpy as np
 
@@ -22,6 +22,19 @@ _TURN_PER_POINT = math.radians(3)  # largest turn between two points of a drawn 
 
 
 Segments = tuple[np.ndarray, np.ndarray]  # drive [segment, 2] rad/s and durations [segment] s
+
+
+# drive, durations, eps [grid], delta [grid] rad/s -> infidelity [grid]
+Model = Callable[[np.ndarray, np.ndarray, np.ndarray, np.ndarray], np.ndarray]
+
+
+def _model(target: Target, model: Model | None) -> Model:
+    """The model asked for, else two levels without decay."""
+    if model is not None:
+        return model
+    return lambda drive, durations, eps, delta: infidelity(
+        propagate(drive, durations, eps, delta), target
+    )
 
 
 def _segments(pulse: Pulse | Segments) -> Segments:
@@ -56,6 +69,7 @@ def cut_table(
     amplitude_error: Sequence[float],
     detuning: Sequence[float],
     offset: float = 0.0,
+    model: Model | None = None,
 ) -> dict:
     """Infidelity of what the codes play along each error, the other one being zero.
 
@@ -65,19 +79,19 @@ def cut_table(
         amplitude_error: [k] unitless, relative.
         detuning: [m] rad/s, counted from ``offset``.
         offset: rad/s, the job's own detuning.
+        model: gives the infidelity where two levels are not enough.
     Returns:
         ``amplitude_error`` [k], ``detuning_MHz`` [m], and by pulse
         ``against_amplitude`` [k], ``against_detuning`` [m].
     """
     eps, delta = np.asarray(amplitude_error, float), np.asarray(detuning, float)
+    found = _model(target, model)
     table = {"amplitude_error": eps, "detuning_MHz": delta / MHZ, "pulses": {}}
     for name, pulse in pulses.items():
         drive, durations = _segments(pulse)
         table["pulses"][name] = {
-            "against_amplitude": infidelity(propagate(drive, durations, eps, offset), target),
-            "against_detuning": infidelity(
-                propagate(drive, durations, 0.0, offset + delta), target
-            ),
+            "against_amplitude": found(drive, durations, eps, np.full(len(eps), offset)),
+            "against_detuning": found(drive, durations, np.zeros(len(delta)), offset + delta),
         }
     return table
 
@@ -88,6 +102,7 @@ def map_table(
     amplitude_error: Sequence[float],
     detuning: Sequence[float],
     offset: float = 0.0,
+    model: Model | None = None,
 ) -> dict:
     """Infidelity of what the codes play over the plane of both errors; arguments as in a cut.
 
@@ -96,10 +111,11 @@ def map_table(
     """
     eps, delta = np.asarray(amplitude_error, float), np.asarray(detuning, float)
     e, d = np.meshgrid(eps, delta, indexing="ij")
+    found = _model(target, model)
     table = {"amplitude_error": eps, "detuning_MHz": delta / MHZ, "infidelity": {}}
     for name, pulse in pulses.items():
-        q = propagate(*_segments(pulse), e, offset + d)
-        table["infidelity"][name] = infidelity(q, target)
+        values = found(*_segments(pulse), e.ravel(), offset + d.ravel())
+        table["infidelity"][name] = values.reshape(e.shape)
     return table
 
 

@@ -215,7 +215,10 @@ def _points_wide(svg: bytes) -> float:
 def _live(live: Mapping | None) -> str:
     """The panel; hidden until the script has drawn it."""
     if live is None:
-        return '<p class="note">These pulses are too long for a live panel.</p>'
+        return (
+            '<p class="note">No live panel: it follows two levels and pulses of moderate length '
+            "only.</p>"
+        )
     options = "".join(
         f'<option value="{k}">{escape(pulse["name"])}</option>'
         for k, pulse in enumerate(live["pulses"])

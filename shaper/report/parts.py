@@ -18,7 +18,17 @@ COLUMNS = (
     ("infidelity_mean", "mean over the box", ".2e"),
     ("infidelity_worst", "worst over the box", ".2e"),
     ("infidelity_guaranteed", "guaranteed worst", ".2e"),
+    ("infidelity_on_three_levels", "infidelity, nominal, on all levels", ".2e"),
+    ("infidelity_worst_on_three_levels", "worst over the box, on all levels", ".2e"),
+    ("leakage", "leakage", ".2e"),
     ("infidelity_worst_with_decay", "worst with T1, T2", ".2e"),
+)
+
+_OF_TWO_LEVELS = (
+    "infidelity",
+    "infidelity_mean",
+    "infidelity_worst",
+    "infidelity_guaranteed",
 )
 
 
@@ -27,6 +37,8 @@ def pulse_table(rows: Sequence[Mapping]) -> str:
     out.
     """
     shown = [column for column in COLUMNS if any(row.get(column[0]) is not None for row in rows)]
+    if any(row.get("leakage") is not None for row in rows):  # then two levels mean nothing
+        shown = [column for column in shown if column[0] not in _OF_TWO_LEVELS]
     units = {key: _unit(key, rows) for key, _, _ in shown}
     head = "".join(
         f'<th scope="col">{escape(label)}{units[key][1]}</th>' for key, label, _ in shown

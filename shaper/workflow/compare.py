@@ -11,6 +11,7 @@ import numpy as np
 
 from shaper.composite import limit
 from shaper.composite.compose import library_pulses
+from shaper.evidence.levels import level_infidelity
 from shaper.evidence.row import Row, measure
 from shaper.evidence.tables import cut_table, map_table, plain, waveform_table
 from shaper.evidence.verdict import Change, Verdict, judge, sentence
@@ -23,6 +24,7 @@ from shaper.workflow.check import frame_update
 
 _CUT_POINTS = 121
 _MAP_POINTS = 81
+_LEVEL_MAP_POINTS = 31  # levels cost a hundred times what the qubit does
 _MOST_SHOWN = 6  # waveforms, cuts or maps in one picture: beyond that it becomes a wall
 _BEYOND = 2.0  # cuts reach this many tolerances to either side
 _CUT_AMPLITUDE = 0.1  # relative; how far the cut reaches where the job names no tolerance
@@ -102,7 +104,16 @@ def cuts(comparison: Comparison, group: Group | None = None) -> dict:
     side = np.linspace(-1, 1, _CUT_POINTS)
     amplitude, detuning = _reach(job)
     pulses = _at_qubit(comparison, comparison.pulses)
-    return cut_table(pulses, job.target, amplitude * side, detuning * side, job.detuning)
+    return cut_table(
+        pulses, job.target, amplitude * side, detuning * side, job.detuning, _model(job)
+    )
+
+
+def _model(job: Job):
+    """The job's levels where it has them; None for two."""
+    if job.anharmonicity is None:
+        return None
+    return lambda drive, durations, eps, delta: level_infidelity(drive, durations, job, eps, delta)
 
 
 def _at_qubit(comparison: Comparison, names: Sequence[str]) -> dict:
@@ -128,10 +139,12 @@ def maps(
         group: whose; default: the addressed qubit's.
     """
     job = comparison.job if group is None else comparison.job.for_group(group)
-    side = np.linspace(-1, 1, _MAP_POINTS)
+    side = np.linspace(-1, 1, _MAP_POINTS if job.anharmonicity is None else _LEVEL_MAP_POINTS)
     amplitude, detuning = _reach(job)
     shown = _at_qubit(comparison, names or worth_showing(comparison))
-    return map_table(shown, job.target, amplitude * side, detuning * side, job.detuning)
+    return map_table(
+        shown, job.target, amplitude * side, detuning * side, job.detuning, _model(job)
+    )
 
 
 def worth_showing(comparison: Comparison) -> list[str]:

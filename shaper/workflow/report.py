@@ -145,9 +145,12 @@ def live_data(comparison: Comparison) -> dict | None:
     ``pulses`` as the codes arrive at the qubit (``rates`` [run][2] rad/s, ``durations`` [run] s,
     line and mixer included where the job has them), the target of each qubit as error rows and
     scale, the drive, start states, and the reach of each slider. Pulses of more segments than a
-    page can follow are left out; None if no pulse is left.
+    page can follow are left out; None if no pulse is left, or if the job has more levels
+    than two, which the page does not follow.
     """
     job = comparison.job
+    if job.anharmonicity is not None:
+        return None
     pulses = [_arriving(job, name, pulse) for name, pulse in comparison.pulses.items()]
     pulses = [pulse for pulse in pulses if len(pulse["durations"]) <= _MOST_SEGMENTS]
     if not pulses:
