@@ -44,6 +44,101 @@
     return target.scale * sum;
   }
 
+  // --- more levels than two: the qubit's two columns of the propagator, complex numbers as pairs
+
+  // One segment on the columns [level][column] by the Taylor series of the exponential, in parts
+  // short enough for it. H is tridiagonal: delta (1/2 - n) + anharmonicity n (n - 1) / 2 on the
+  // diagonal, (Wx - i Wy) sqrt(n) / 2 beside it.
+  function ladderSegment(v, rate, seconds, eps, delta, seen) {
+    const { levels, anharmonicity } = data.ladder;
+    const [wx, wy] = [0.5 * rate[0] * (1 + eps), -0.5 * rate[1] * (1 + eps)];
+    const rise = Math.hypot(wx, wy) * (Math.sqrt(levels - 1) + Math.sqrt(levels - 2));
+    const still = Array.from({ length: levels },
+      (_, n) => delta * (0.5 - n) + (anharmonicity * n * (n - 1)) / 2);
+    const norm = Math.max(...still.map(Math.abs)) + rise;
+    const parts = Math.max(1, Math.ceil((norm * seconds) / 0.7));
+    const step = seconds / parts;
+    for (let part = 0; part < parts; part += 1) {
+      let term = v.slice();
+      for (let k = 1; k < 25; k += 1) {
+        const next = new Float64Array(v.length);
+        for (let n = 0; n < levels; n += 1) {
+          const [up, down] = [Math.sqrt(n + 1), Math.sqrt(n)];
+          for (let c = 0; c < 2; c += 1) {
+            const at = 4 * n + 2 * c;
+            let re = still[n] * term[at];
+            let im = still[n] * term[at + 1];
+            if (n + 1 < levels) { // (wx + i wy) sqrt(n + 1) from the level above
+              re += up * (wx * term[at + 4] - wy * term[at + 5]);
+              im += up * (wx * term[at + 5] + wy * term[at + 4]);
+            }
+            if (n > 0) { // its conjugate from the level below
+              re += down * (wx * term[at - 4] + wy * term[at - 3]);
+              im += down * (wx * term[at - 3] - wy * term[at - 4]);
+            }
+            next[at] = (im * step) / k; // -i (re + i im)
+            next[at + 1] = (-re * step) / k;
+          }
+        }
+        term = next;
+        let largest = 0;
+        for (let j = 0; j < v.length; j += 1) {
+          v[j] += term[j];
+          largest = Math.max(largest, Math.abs(term[j]));
+        }
+        if (largest < 1e-19) break;
+      }
+      if (seen) seen(v);
+    }
+  }
+
+  function ladderColumns(pulse, eps, delta, seen) {
+    const v = new Float64Array(4 * data.ladder.levels);
+    v[0] = 1; // |0> to |0>
+    v[6] = 1; // |1> to |1>
+    pulse.rates.forEach((rate, k) => ladderSegment(v, rate, pulse.durations[k], eps, delta, seen));
+    return v;
+  }
+
+  // Pedersen's formula: squares of three error components, and half of what is found outside.
+  function ladderInfidelity(v) {
+    let lost = 0;
+    for (const row of data.ladder.rows) { // [i][j] pairs
+      let [re, im] = [0, 0];
+      row.forEach((line, i) => line.forEach(([a, b], j) => {
+        const at = 4 * i + 2 * j;
+        re += a * v[at] - b * v[at + 1];
+        im += a * v[at + 1] + b * v[at];
+      }));
+      lost += re * re + im * im;
+    }
+    for (let at = 8; at < v.length; at += 1) lost += 0.5 * v[at] * v[at];
+    return lost;
+  }
+
+  // Direction of the qubit's part of the state that began along a Bloch vector.
+  function ladderBloch(v, begin) {
+    const a = Math.sqrt(Math.max(0, (1 + begin[2]) / 2));
+    const b = a > 1e-9 ? [begin[0] / (2 * a), begin[1] / (2 * a)] : [1, 0];
+    const part = (n) => [
+      a * v[4 * n] + b[0] * v[4 * n + 2] - b[1] * v[4 * n + 3],
+      a * v[4 * n + 1] + b[0] * v[4 * n + 3] + b[1] * v[4 * n + 2],
+    ];
+    const [p, q] = [part(0), part(1)];
+    const way = [
+      2 * (p[0] * q[0] + p[1] * q[1]),
+      2 * (p[0] * q[1] - p[1] * q[0]),
+      p[0] * p[0] + p[1] * p[1] - q[0] * q[0] - q[1] * q[1],
+    ];
+    const length = Math.hypot(...way);
+    return way.map((part_) => part_ / length);
+  }
+
+  function judged(pulse, target, eps, delta) {
+    if (data.ladder) return ladderInfidelity(ladderColumns(pulse, eps, delta));
+    return infidelity(propagator(pulse, eps, delta), target);
+  }
+
   function turned(q, v) {
     const [w, x, y, z] = q;
     const cross = [y * v[2] - z * v[1], z * v[0] - x * v[2], x * v[1] - y * v[0]];
@@ -55,6 +150,11 @@
 
   // The way of a Bloch vector: points at most three degrees apart, wider for very long pulses.
   function path(pulse, start, eps, delta) {
+    if (data.ladder) {
+      const way = [start];
+      ladderColumns(pulse, eps, delta, (v) => way.push(ladderBloch(v, start)));
+      return way;
+    }
     const angles = pulse.rates.map((rate, k) =>
       Math.hypot(Math.hypot(...rate) * (1 + eps), delta) * pulse.durations[k]);
     const whole = angles.reduce((a, b) => a + b, 0);
@@ -198,7 +298,7 @@
   const qubit = byId("qubit"); // only there if the pulse acts on several
 
   function show(side, name, pulse, target, eps, delta) {
-    const value = infidelity(propagator(pulse, eps, delta), target);
+    const value = judged(pulse, target, eps, delta);
     byId(`${side}-name`).textContent = name;
     byId(`${side}-infidelity`).textContent = scientific(value);
     byId(`${side}-digits`).textContent = value.toExponential(12);

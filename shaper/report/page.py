@@ -216,7 +216,7 @@ def _live(live: Mapping | None) -> str:
     """The panel; hidden until the script has drawn it."""
     if live is None:
         return (
-            '<p class="note">No live panel: it follows two levels and pulses of moderate length '
+            '<p class="note">No live panel: it follows exact gates and pulses of moderate length '
             "only.</p>"
         )
     options = "".join(
@@ -248,11 +248,12 @@ def _live(live: Mapping | None) -> str:
             f'<div><label for="qubit">Qubit</label><select id="qubit" autocomplete="off">{qubits}'
             "</select></div>"
         )
+    levels = live["ladder"]["levels"] if live["ladder"] else 2
     sides = "".join(_side(name) for name in ("first", "second"))
     return f"""<section id="live" class="screen-only" aria-labelledby="live-heading" hidden>
 <h2 id="live-heading">Try an error</h2>
 <p>Move the errors and see what they do to the Bloch vector and to the gate. Computed in this page
-from the DAC codes, on two levels and without decay. Circle: start, cross: end.</p>
+from the DAC codes, on {levels} levels and without decay. Circle: start, cross: end.</p>
 <div class="controls">{controls}
 <div><label for="start">Start state</label><select id="start" autocomplete="off">{starts}</select>
 </div>

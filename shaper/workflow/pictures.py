@@ -32,8 +32,9 @@ def figure_tables(waveform: Waveform, comparison: Comparison) -> dict:
     """All tables that the report's figures are drawn from.
 
     Returns:
-        By figure: ``waveform``, ``cuts``, ``map``, ``spectrum``, ``discs``, and ``history``,
-        ``duration`` and ``budget`` where the file holds them, each as ``shaper.figures`` takes it.
+        By figure: ``waveform``, ``cuts``, ``map``, ``spectrum``, ``discs`` (of two levels), and
+        ``history``, ``duration`` and ``budget`` where the file holds them, each as
+        ``shaper.figures`` takes it.
     """
     job, pulses = comparison.job, comparison.pulses
     first, *others = pulses
@@ -45,14 +46,15 @@ def figure_tables(waveform: Waveform, comparison: Comparison) -> dict:
     lines["pulses"] = {name: lines["pulses"][name] for name in shown}
     frequency = np.linspace(-1, 1, _SPECTRUM_POINTS) * _SPECTRUM_REACH * job.rabi_max
     starts = dict(list(start_states(job).items())[:_MOST_STATES])
+    arrived = {name: arriving(job, pulse) for name, pulse in both.items()}
     found = {
         "waveform": {name: tables.waveform_table(pulse) for name, pulse in both.items()},
         "cuts": lines,
         "map": plane,
         "spectrum": tables.spectrum_table(both, frequency),
-        "discs": tables.path_table(
-            {name: arriving(job, pulse) for name, pulse in both.items()}, starts, 0.0, job.detuning
-        ),
+        "discs": None
+        if job.anharmonicity
+        else tables.path_table(arrived, starts, 0.0, job.detuning),
         "history": history_table(waveform),
         "duration": duration_table(waveform),
         "budget": budget_table(waveform),
@@ -204,15 +206,16 @@ def pictures(found: dict, job: Job, shortest: float) -> list[Picture]:
                 lambda theme: figures.budget_figure(found["budget"], measure=measure, theme=theme),
             )
         )
-    drawn.append(
-        _drawn(
-            "Way of the Bloch vector",
-            "Lambert's equal-area discs, one a hemisphere, without errors.",
-            f"Bloch vectors during {both}, two start states each.",
-            lambda theme: figures.disc_figure(found["discs"], theme=theme),
-            paper_only=True,
+    if "discs" in found:
+        drawn.append(
+            _drawn(
+                "Way of the Bloch vector",
+                "Lambert's equal-area discs, one a hemisphere, without errors.",
+                f"Bloch vectors during {both}, two start states each.",
+                lambda theme: figures.disc_figure(found["discs"], theme=theme),
+                paper_only=True,
+            )
         )
-    )
     return drawn
 
 

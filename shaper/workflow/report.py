@@ -13,6 +13,7 @@ from shaper.drive.dac import largest_code
 from shaper.evidence import tables
 from shaper.evidence.verdict import sentence
 from shaper.job import Job
+from shaper.physics.leakage import qubit_rows
 from shaper.pulse import Pulse, Waveform
 from shaper.readable import rate, time
 from shaper.report import Report, report_page
@@ -145,12 +146,20 @@ def live_data(comparison: Comparison) -> dict | None:
     ``pulses`` as the codes arrive at the qubit (``rates`` [run][2] rad/s, ``durations`` [run] s,
     line and mixer included where the job has them), the target of each qubit as error rows and
     scale, the drive, start states, and the reach of each slider. Pulses of more segments than a
-    page can follow are left out; None if no pulse is left, or if the job has more levels
-    than two, which the page does not follow.
+    page can follow are left out; None if no pulse is left, or if a job with more levels than two
+    wants something else than one exact gate, which the page does not follow.
     """
     job = comparison.job
+    ladder = None
     if job.anharmonicity is not None:
-        return None
+        if job.target.kind != "gate" or job.target.free_axis is not None or job.others:
+            return None
+        rows = qubit_rows(job.target)
+        ladder = {
+            "levels": job.levels,
+            "anharmonicity": job.anharmonicity,
+            "rows": np.stack([rows.real, rows.imag], axis=-1),
+        }
     pulses = [_arriving(job, name, pulse) for name, pulse in comparison.pulses.items()]
     pulses = [pulse for pulse in pulses if len(pulse["durations"]) <= _MOST_SEGMENTS]
     if not pulses:
@@ -161,6 +170,7 @@ def live_data(comparison: Comparison) -> dict | None:
     percent = _slider(100 * (_SLIDER_REACH * job.amplitude_tolerance or _SLIDER_DEFAULT))
     reach = _SLIDER_REACH * job.detuning_tolerance or _SLIDER_DEFAULT * job.rabi_max
     has_sandwich = "sandwich" in [pulse["name"] for pulse in pulses]
+    straight = path_of(job).straight and ladder is None
     degrees = None if angle is None else float(f"{angle / DEG:.9g}")
     return tables.plain(
         {
@@ -174,6 +184,7 @@ def live_data(comparison: Comparison) -> dict | None:
                 }
                 for group in job.groups
             ],
+            "ladder": ladder,
             "z_angle_deg": degrees,
             "drive": {
                 "rabi_max": job.rabi_max,
@@ -187,7 +198,7 @@ def live_data(comparison: Comparison) -> dict | None:
             "detuning_slider": _slider(reach / unit),
             "theta_slider": (
                 {"min": -180.0, "max": 180.0, "step": _theta_step(degrees)}
-                if degrees is not None and has_sandwich and path_of(job).straight
+                if degrees is not None and has_sandwich and straight
                 else None
             ),
             "starts": [{"label": k, "bloch": v} for k, v in start_states(job).items()],

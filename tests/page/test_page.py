@@ -9,6 +9,7 @@ from browser import CHROMIUM, DRIVER, KEYS, browser
 from report_case import LINE_AND_NEIGHBOR, make_case
 
 from shaper.composite import place, sandwich
+from shaper.evidence.levels import level_infidelity, qubit_columns
 from shaper.evidence.tables import path_table
 from shaper.figures.discs import on_disc
 from shaper.job import parse_job
@@ -104,6 +105,27 @@ def test_behind_a_line_the_panel_shows_what_arrives_at_each_qubit(chromium, tmp_
         delta = group.detuning + walk(chromium, rng, "detuning") * MHZ
         wanted = infidelity(propagate(drive, durations, eps, delta), group.target)
         assert float(chromium.text("#first-digits")) == pytest.approx(float(wanted), **SAME)
+
+
+def test_on_a_ladder_the_panel_counts_leakage(chromium, tmp_path, rng):
+    case = make_case(target='gate = "x"\nangle_deg = 90.0', anharmonicity_MHz=-210.0)
+    job = parse_job(case.job_text)
+    (tmp_path / "a.html").write_text(make_report(case), encoding="utf-8")
+    chromium.open(tmp_path / "a.html")
+    for _ in range(5):
+        eps = walk(chromium, rng, "amplitude") / 100
+        delta = job.detuning + walk(chromium, rng, "detuning") * MHZ
+        for side, name in (("first", "shaped"), ("second", "sandwich")):
+            errors = np.array([eps]), np.array([delta])
+            segments = case.pulses[name].played
+            wanted = level_infidelity(*segments, job, *errors)[0]
+            assert float(chromium.text(f"#{side}-digits")) == pytest.approx(wanted, **SAME)
+    state = qubit_columns(*case.pulses["sandwich"].played, job, *errors)[0, :2, 0]  # from |0>
+    choose(chromium, "start", list(START_STATES).index("|0⟩"))
+    a, b = state / np.linalg.norm(state)
+    bloch = [2 * (a.conj() * b).real, 2 * (a.conj() * b).imag, abs(a) ** 2 - abs(b) ** 2]
+    shown = chromium.text("#second-end").strip("()").replace("−", "-").split(",")
+    np.testing.assert_allclose([float(part) for part in shown], bloch, atol=5.1e-4)
 
 
 def test_the_panel_starts_with_the_pulses_of_the_file(chromium, case):
