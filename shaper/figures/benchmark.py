@@ -44,14 +44,18 @@ def benchmark_figure(
     reached = [(v["shaper_s"], float(k)) for k, v in reach.items() if v["shaper_s"] is not None]
     right.step(*zip(*trail, strict=True), where="post", zorder=3, **pen["numpy"].line)
     if reached:
-        right.plot(
-            *zip(*sorted(reached), strict=True),
+        right.step(
+            *zip(*sorted(reached, key=lambda point: -point[1]), strict=True),
+            where="post",
             marker=pen["engine"].marker,
             markersize=4,
             zorder=4,
             **pen["engine"].line,
         )
     right.set_xscale("log")
+    right.xaxis.set_major_locator(LogLocator(subs=(1.0, 2.0, 5.0)))
+    right.xaxis.set_major_formatter(lambda seconds, _: f"{seconds:g}")
+    right.xaxis.set_minor_formatter(NullFormatter())
     seen = [best for _, best in trail] + [goal for _, goal in reached]
     style.log_infidelity_axis(right, seen)
     right.set_title("Waiting for quality")
