@@ -37,7 +37,7 @@ Array = jax.Array
 MOST_LEVELS = 5
 LARGEST_NORM = 1.5  # of H dt; a slice that exceeds it is cut into equal parts
 WIDEST_BLOCK = 256  # grid points carried at once: their series must stay in the cache
-_ROUND_OFF = 1e-18
+_TRUNCATION = 2e-16  # of a slice's elements: no more than their own round-off
 
 
 @dataclass(frozen=True)
@@ -99,11 +99,11 @@ def plan(
     cuts = max(1, math.ceil(norm / LARGEST_NORM))
     norm /= cuts
     powers = 2
-    while norm ** (powers + 1) / math.factorial(powers + 1) > _ROUND_OFF:
+    while norm ** (powers + 1) / math.factorial(powers + 1) > _TRUNCATION:
         powers += 1
     kick = duration / cuts * largest_drive / 2 * rise  # each power of s costs two of these
     terms = 1
-    while terms < powers and kick ** (2 * terms) / math.factorial(2 * terms) > _ROUND_OFF:
+    while terms < powers and kick ** (2 * terms) / math.factorial(2 * terms) > _TRUNCATION:
         terms += 1
     return Steps(cuts, powers, terms)
 
