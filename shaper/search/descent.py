@@ -10,7 +10,7 @@ scored.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 
 import jax
 import numpy as np
@@ -19,7 +19,13 @@ from shaper.job import Job
 from shaper.search import gauss_newton, quasi_newton
 from shaper.search.checkpoint import Checkpoint
 from shaper.search.compiler import prepare
-from shaper.search.objective import Problem, all_infidelities, drive_of, make_problem
+from shaper.search.objective import (
+    Problem,
+    all_infidelities,
+    all_wish_costs,
+    drive_of,
+    make_problem,
+)
 from shaper.search.starts import starting_parameters
 
 STATUSES = {
@@ -55,9 +61,9 @@ class Stage:
     steps: int | None
 
 
-EXPLORE = Stage("exploring", (3, 5), 1.5, None, (1.0,), None)
-REFINE = Stage("refining", (7, 11), 3.0, 6, (1.0, 4.0, 16.0), 40)
-FINISH = Stage("finishing", (11, 15), 4.0, 2, (64.0, 256.0), 40)
+EXPLORE = Stage("exploring", (3, 5), 0.7, None, (1.0,), None)
+REFINE = Stage("refining", (7, 11), 1.5, 6, (1.0, 4.0, 16.0), 40)
+FINISH = Stage("finishing", (11, 15), 2.5, 2, (64.0, 256.0), 40)
 LARGEST_JACOBIAN = 3e7  # doubles, all starts together; beyond it quasi-Newton steps are taken
 MEASURED = 8  # starts that are measured on the score's grid at the end
 
@@ -70,11 +76,14 @@ class Leg:
 
     Attributes:
         starts: [kept] indices of the starts that took part.
-        infidelity: [kept, step] the power mean over the stage's grid after each step.
+        infidelity: [kept, step] the power mean over the stage's grid after each step, times the
+            exponential of what the wishes cost.
+        wishes: name to [kept, step] cost of each wish, weight included; nan between two looks.
     """
 
     starts: np.ndarray
     infidelity: np.ndarray
+    wishes: dict[str, np.ndarray] = field(default_factory=dict)
 
 
 @dataclass(frozen=True)
@@ -194,6 +203,7 @@ class _Run:
             stage = self.stages[number]
             self.chosen = chosen[: stage.kept]
             self.costs: list[np.ndarray] = []
+            self.wish_costs: list[dict[str, np.ndarray]] = []
             self._make_problem()
             self._begin_power()
 
@@ -218,10 +228,27 @@ class _Run:
         gain = costs[0] - costs[-1]
         self.idle = np.where(gain < STALL_GAIN, self.idle + 1, 0)
         self.costs.append(costs[1:] if self.costs else costs)
+        if self.problem.wishes:
+            self._log_wishes(len(self.costs[-1]))
         self.done += chunk
         self._look_for_goal()
         if self.reached or self.done >= steps or np.all(self.idle >= STALL_CHUNKS):
             self._end_power(stage, power)
+
+    def _log_wishes(self, steps: int) -> None:
+        found = all_wish_costs(self.problem, self.state.parameters)
+        self.wish_costs.append(
+            {
+                name: np.vstack([np.full((steps - 1, len(cost)), np.nan), cost])
+                for name, cost in found.items()
+            }
+        )
+
+    def _leg(self) -> Leg:
+        """What the stage has done so far."""
+        names = self.wish_costs[0] if self.wish_costs else ()
+        wishes = {name: np.concatenate([c[name] for c in self.wish_costs]).T for name in names}
+        return Leg(self.chosen, np.exp(np.concatenate(self.costs)).T, wishes)
 
     def _end_power(self, stage: Stage, power: float) -> None:
         self.parameters[self.chosen] = np.asarray(self.state.parameters)
@@ -235,7 +262,7 @@ class _Run:
         if self.power_number < len(stage.powers) and not self.reached and len(order):
             self._begin_power()
             return
-        self.legs.append(Leg(self.chosen, np.exp(np.concatenate(self.costs)).T))
+        self.legs.append(self._leg())
         self._enter(self.stage_number + 1 if len(order) else len(self.stages), self.chosen[order])
 
     def _look_for_goal(self) -> None:
@@ -288,7 +315,7 @@ class _Run:
             self.parameters[self.chosen] = np.asarray(self.state.parameters)
             self._remember(self.chosen, power=1.0)
             if self.costs:
-                self.legs.append(Leg(self.chosen, np.exp(np.concatenate(self.costs)).T))
+                self.legs.append(self._leg())
         goal = self.job.stop_infidelity
         if goal is not None and self.best_score <= goal:
             self.status[self.best_start] = "converged"
@@ -316,8 +343,11 @@ class _Run:
             kept |= {f"state_{k}": np.asarray(leaf) for k, leaf in enumerate(leaves)}
             if self.costs:
                 kept["costs"] = np.concatenate(self.costs)
+            for name in self.wish_costs[0] if self.wish_costs else ():
+                kept[f"wish_{name}"] = np.concatenate([c[name] for c in self.wish_costs])
         for k, leg in enumerate(self.legs):
             kept |= {f"leg_{k}_starts": leg.starts, f"leg_{k}_infidelity": leg.infidelity}
+            kept |= {f"leg_{k}_wish_{name}": cost for name, cost in leg.wishes.items()}
         return kept
 
     def restore(self, kept: dict[str, np.ndarray] | None) -> None:
@@ -328,7 +358,11 @@ class _Run:
             value = kept[name]
             setattr(self, name, value.copy() if value.ndim else value.item())
         self.legs = [
-            Leg(kept[f"leg_{k}_starts"], kept[f"leg_{k}_infidelity"])
+            Leg(
+                kept[f"leg_{k}_starts"],
+                kept[f"leg_{k}_infidelity"],
+                _with_prefix(kept, f"leg_{k}_wish_"),
+            )
             for k in range(sum(name.endswith("_starts") for name in kept))
         ]
         if self.stage_number < len(self.stages):
@@ -339,6 +373,13 @@ class _Run:
             leaves = [kept[f"state_{k}"] for k in range(len(leaves))]
             self.state = jax.tree_util.tree_unflatten(tree, leaves)
             self.costs = [kept["costs"]] if "costs" in kept else []
+            wishes = _with_prefix(kept, "wish_")
+            self.wish_costs = [wishes] if wishes else []
+
+
+def _with_prefix(kept: dict[str, np.ndarray], prefix: str) -> dict[str, np.ndarray]:
+    """The arrays whose names begin so, under the rest of their names."""
+    return {n.removeprefix(prefix): value for n, value in kept.items() if n.startswith(prefix)}
 
 
 _KEPT = (

@@ -215,6 +215,12 @@ def wish_costs(problem: Problem, parameters: Array) -> dict[str, Array]:
     }
 
 
+@jax.jit
+def all_wish_costs(problem: Problem, parameters: Array) -> dict[str, Array]:
+    """Each wish's cost [start], for parameters [start, slice, 2] rad; one compiled program."""
+    return jax.vmap(wish_costs, (None, 0))(problem, parameters)
+
+
 def log_power_mean(infidelity: Array, weight: Array, power: Array | float) -> Array:
     """Logarithm of ``(sum weight infidelity^power)^(1/power)``, without under- or overflow.
 

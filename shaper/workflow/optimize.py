@@ -77,25 +77,37 @@ def reached(job: Job, score: Score) -> bool:
 
 
 def _history(found: descent.Found) -> dict[str, Table]:
-    """Infidelity against iteration for every start, the stages one after another."""
+    """Infidelity and wishes against iteration for every start, the stages one after another."""
     legs = list(found.history.values())
-    values = np.full((len(found.names), sum(leg.infidelity.shape[1] for leg in legs)), np.nan)
-    stage, column = [], 0
-    for number, leg in enumerate(legs):
-        steps = leg.infidelity.shape[1]
-        values[leg.starts, column : column + steps] = leg.infidelity
-        stage += [number] * steps
-        column += steps
-    return {
-        "iteration": Table(np.arange(column), ("iteration",), "1", "step of the search"),
+    edges = np.cumsum([0, *(leg.infidelity.shape[1] for leg in legs)])
+
+    def joined(parts: list[np.ndarray | None]) -> np.ndarray:
+        values = np.full((len(found.names), edges[-1]), np.nan)
+        for leg, part, first, last in zip(legs, parts, edges, edges[1:], strict=False):
+            if part is not None:
+                values[leg.starts, first:last] = part
+        return values
+
+    axes = ("start", "iteration")
+    tables = {
+        "iteration": Table(np.arange(edges[-1]), axes[1:], "1", "step of the search"),
         "infidelity": Table(
-            values,
-            ("start", "iteration"),
+            joined([leg.infidelity for leg in legs]),
+            axes,
             "1",
             "what was lowered: a power mean of the infidelity over the stage's grid",
         ),
-        "stage": Table(np.array(stage), ("iteration",), "1", "stage, see the attribute stages"),
+        "stage": Table(
+            np.repeat(np.arange(len(legs)), np.diff(edges)),
+            axes[1:],
+            "1",
+            "stage, see the attribute stages",
+        ),
     }
+    for name in sorted({name for leg in legs for name in leg.wishes}):
+        parts = [leg.wishes.get(name) for leg in legs]
+        tables[name] = Table(joined(parts), axes, "1", f"cost of the wish {name}, weight included")
+    return tables
 
 
 def _curve(shortest: Shortest) -> dict[str, Table]:
