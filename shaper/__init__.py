@@ -1,5 +1,6 @@
 """Waveforms for a bench that can only drive x and y."""
 
+import sys
 from importlib import import_module
 
 __version__ = "0.1.0"
@@ -22,6 +23,8 @@ def __getattr__(name: str) -> object:
         raise AttributeError(f"module 'shaper' has no attribute {name!r}")
     value = getattr(import_module(_PUBLIC[name]), name)
     globals()[name] = value  # found without this detour from now on
+    if "IPython" in sys.modules:  # in a notebook results show themselves
+        import_module("shaper.workflow.notebook").attach()
     return value
 
 

@@ -11,9 +11,11 @@ from scipy.linalg import eigvalsh_tridiagonal
 
 from shaper.drive import line as drive_line
 from shaper.drive.line_data import read_step_response, read_touchstone
+from shaper.errors import InputError
 from shaper.job import Job
 
 SCORE_POINTS = 41  # per axis, at least; of the one grid on which every pulse is scored
+MOST_POINTS = 1_000_000  # of a grid; more are not worth waiting for
 SCORE_DENSITY = 8.0  # points per rad of reach: see ``points_for``
 
 
@@ -93,9 +95,14 @@ def dense_grid(
     duration = job.duration if duration is None else duration
     turn = job.rabi_max * duration * (1.0 if job.bound == "circle" else math.sqrt(2))
     reach = job.amplitude_tolerance * turn, job.detuning_tolerance * duration
-    return error_grid(
-        job, *(points_for(r, n, per_radian) for r, n in zip(reach, least, strict=True))
-    )
+    points = [points_for(r, n, per_radian) for r, n in zip(reach, least, strict=True)]
+    if points[0] * points[1] > MOST_POINTS:
+        raise InputError(
+            f"tolerance: expected errors of at most some hundred radians in {duration:.4g} s, "
+            f"got {reach[0]:.3g} rad by amplitude and {reach[1]:.3g} rad by detuning; narrow the "
+            "tolerance or shorten the pulse"
+        )
+    return error_grid(job, *points)
 
 
 def points_for(reach: float, least: int = SCORE_POINTS, per_radian: float = SCORE_DENSITY) -> int:

@@ -7,10 +7,12 @@ import io
 import time
 import zipfile
 from collections.abc import Callable
+from importlib.metadata import version
 from pathlib import Path
 
 import numpy as np
 
+from shaper import __version__
 from shaper.errors import InputError
 from shaper.job import Job
 
@@ -24,7 +26,8 @@ class Checkpoint:
 
     Args:
         path: of the file.
-        job: whose search it is; another job's checkpoint is refused.
+        job: whose search it is; the checkpoint of another job, or of another version of the
+            program, is refused.
         write: replaces a file's content whole or not at all, ``write(path, data)``.
         resume: whether to go on from what the file holds.
         interval: s between two writes.
@@ -39,7 +42,8 @@ class Checkpoint:
         interval: float = INTERVAL,
     ):
         self.path, self._write, self._resume, self._interval = path, write, resume, interval
-        self._job = hashlib.sha256(job.text.encode()).hexdigest()
+        whose = f"{__version__} {version('jaxlib')}\n{job.text}"
+        self._job = hashlib.sha256(whose.encode()).hexdigest()
         self._last = time.monotonic()
 
     @property
@@ -70,7 +74,9 @@ class Checkpoint:
         except _DAMAGED as error:
             raise InputError(f"--resume: {self.path} is not a whole checkpoint: {error}") from error
         if str(kept.pop("job", "")) != self._job:
-            raise InputError(f"--resume: {self.path} belongs to another job than the one given")
+            raise InputError(
+                f"--resume: {self.path} belongs to another job, or another version of the program"
+            )
         return kept
 
     def discard(self) -> None:

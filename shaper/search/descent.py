@@ -186,6 +186,7 @@ class _Run:
         self.parameters = parameters
         self.status = np.full(len(names), "step_limit", dtype="U12")
         self.best_score, self.best_start, self.best = np.inf, 0, parameters[0]
+        self.best_rank = np.inf  # score and wishes together
         self.legs: list[Leg] = []
         self.interrupted = self.reached = False
         self._score_problem = make_problem(job, slices=parameters.shape[1])
@@ -269,8 +270,8 @@ class _Run:
         """Whether the leader meets the goal, on the score's grid too."""
         goal = self.job.stop_infidelity
         found = np.asarray(self.state.worst)
-        if goal is None or not np.any(found <= goal):
-            return
+        if goal is None or self.problem.wishes or not np.any(found <= goal):
+            return  # with wishes there is always something left to gain
         leader = int(np.nanargmin(found))
         self.parameters[self.chosen] = np.asarray(self.state.parameters)
         self._remember(self.chosen[leader : leader + 1], power=1.0)
@@ -292,11 +293,17 @@ class _Run:
         )[: len(starts)]
         mean = found @ np.asarray(self._score_problem.weight)
         score = found.max(axis=1) if worst_counts(self.job) else mean
-        leader = int(np.argmin(np.where(np.isfinite(score), score, np.inf)))
-        if score[leader] < self.best_score:
+        with np.errstate(divide="ignore"):  # a perfect pulse
+            rank = np.log(score + self.problem.floor)
+        if self.problem.wishes:
+            rank += sum(
+                map(np.asarray, all_wish_costs(self.problem, self.parameters[starts]).values())
+            )
+        leader = int(np.argmin(np.where(np.isnan(rank), np.inf, rank)))
+        if rank[leader] < self.best_rank or not np.isfinite(self.best_score):
             start = int(starts[leader])
-            self.best_score, self.best_start = float(score[leader]), start
-            self.best = self.parameters[start].copy()
+            self.best_rank, self.best_score = float(rank[leader]), float(score[leader])
+            self.best_start, self.best = start, self.parameters[start].copy()
         return mean if power == 1 else score
 
     def report(self) -> tuple[str, int, int, float]:
@@ -388,6 +395,7 @@ _KEPT = (
     "parameters",
     "status",
     "best_score",
+    "best_rank",
     "best_start",
     "best",
     "reached",

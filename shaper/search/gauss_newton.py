@@ -31,7 +31,14 @@ import jax.numpy as jnp
 import numpy as np
 
 from shaper.physics import two_level
-from shaper.search.objective import Problem, at_qubit, drive_of, measure, rotation_errors
+from shaper.search.objective import (
+    Problem,
+    at_qubit,
+    drive_of,
+    log_power_mean,
+    measure,
+    rotation_errors,
+)
 
 Array = jax.Array
 
@@ -136,7 +143,9 @@ def _accelerated_step(problem: Problem, power: Array, parameters: Array, damping
     lean, residual = _lean(problem, errors, power)
     jacobian, residual = lean(jacobian).reshape(errors.size, -1), residual.ravel()
     if problem.wishes:
-        size = (2 * power - 1) * jnp.sum(residual**2)
+        found = jnp.sum(errors**2, axis=0)
+        mean = jnp.exp(log_power_mean(found, problem.weight, power))
+        size = (2 * power - 1) * jnp.sum(residual**2) * (1 + problem.floor / mean)
         wish_jacobian, wish_residual = _wish_equations(problem, parameters, size)
         jacobian = jnp.concatenate([jacobian, wish_jacobian])
         residual = jnp.concatenate([residual, wish_residual])

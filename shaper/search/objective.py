@@ -26,6 +26,7 @@ from shaper.search import shape
 Array = jax.Array
 
 _TINY = 1e-60  # keeps the logarithm of a perfect pulse, and its slope, finite
+_GOOD_ENOUGH = 1e-9  # infidelity that wishes need not yield to, where the job names none
 _SLOPE_REACH = 1e-3  # rad; how far the ends of a central difference lie from the center
 
 
@@ -45,6 +46,8 @@ class Problem:
         mix: [point, grid] unitless. What is minimized are these combinations of the grid's
             errors, for slopes by differences. None: the grid points themselves.
         wishes: name to (matrix [equation, slice], weight): costs ``weight |matrix drive|^2``.
+        floor: [] infidelity that is good enough: below it only the wishes count. Zero without
+            wishes.
         bound: "circle" or "box".
         longest_turn: rad; no slice turns further.
     """
@@ -58,6 +61,7 @@ class Problem:
     kernel: Array | None
     mix: Array | None
     wishes: dict[str, tuple[Array, Array]]
+    floor: Array
     bound: str = field(metadata={"static": True})
     longest_turn: float = field(metadata={"static": True})
 
@@ -114,6 +118,7 @@ def make_problem(
         kernel=None if taps is None else taps.kernel,
         mix=_block_diagonal(mixes) if job.minimize == "first_order" else None,
         wishes={} if scored else shape.wishes(job, len(durations)),
+        floor=(job.stop_infidelity or _GOOD_ENOUGH) if shape.wished(job) else 0.0,
         bound=job.bound,
         longest_turn=_rounded_up(float(np.hypot(rate, np.max(np.abs(delta))) * step)),
     )
@@ -237,7 +242,8 @@ def log_power_mean(infidelity: Array, weight: Array, power: Array | float) -> Ar
 
 
 def measure(problem: Problem, power: Array, parameters: Array) -> tuple[Array, Array]:
-    """The cost (log power mean plus wishes) and the largest infidelity on the grid."""
+    """The cost, log(power mean + floor) plus wishes, and the largest infidelity on the grid."""
     found = infidelities(problem, parameters)
     wishes = sum(wish_costs(problem, parameters).values(), jnp.zeros(()))
-    return log_power_mean(found, problem.weight, power) + wishes, jnp.max(found)
+    mean = log_power_mean(found, problem.weight, power)
+    return jnp.logaddexp(mean, jnp.log(problem.floor)) + wishes, jnp.max(found)

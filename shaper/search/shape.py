@@ -27,6 +27,11 @@ def envelope(job: Job, slices: int) -> np.ndarray | None:
     return held
 
 
+def wished(job: Job) -> bool:
+    """Whether the job wishes for anything that costs."""
+    return job.shape.smoothness > 0 or job.shape.max_bandwidth is not None
+
+
 def wishes(job: Job, slices: int) -> dict[str, tuple[np.ndarray, float]]:
     """Name to (matrix [equation, slice], weight) of each cost that the job asks for."""
     found = {}
