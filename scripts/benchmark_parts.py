@@ -18,7 +18,7 @@ import numpy as np
 
 SIZES = ((64, 1), (64, 25), (256, 121), (1000, 441))  # slices, grid points
 TARGET = np.array([np.cos(0.3), 0.0, 0.0, np.sin(0.3)])
-ROUNDS = 7  # turns that the contenders take
+ROUNDS = 9  # turns that the contenders take
 EXPM_AT_MOST = 16  # slices times grid points; above, finite differences take minutes
 
 
@@ -90,7 +90,7 @@ def engine_alone(sizes=SIZES, budget: float = 2.0) -> dict:
     return {"engine_ns": found}
 
 
-def engine_against(sizes=((16, 1), *SIZES), budget: float = 0.1, rounds: int = ROUNDS) -> dict:
+def engine_against(sizes=((16, 1), *SIZES), budget: float = 0.3, rounds: int = ROUNDS) -> dict:
     """Every contender in turn, round by round.
 
     Returns:
