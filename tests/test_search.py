@@ -21,7 +21,7 @@ from shaper.drive.bound import quadratures
 from shaper.job import parse_job
 from shaper.physics.propagate import propagate
 from shaper.rotation import about_z, matrix
-from shaper.search import descent, gauss_newton, quasi_newton
+from shaper.search import descent, gauss_newton, quasi_newton, stages
 from shaper.search.objective import infidelities, log_power_mean, make_problem
 from shaper.search.starts import starting_parameters
 from shaper.target import Target, infidelity
@@ -232,10 +232,10 @@ def test_weights_of_the_steps_hold_the_gradient_of_the_power_mean(rng):
 
 def test_large_problems_go_down_by_quasi_newton_steps(monkeypatch):
     """The other method, taken where jacobians would not fit, reaches the same goal."""
-    monkeypatch.setattr(descent, "LARGEST_JACOBIAN", 0)
+    monkeypatch.setattr(stages, "LARGEST_JACOBIAN", 0)
     job = replace(parse_job(job_text(1.02 * Z90_LIMIT)), starts=4)
     problem = make_problem(job, (3, 5))
-    assert descent.method_for(problem, job.starts) is quasi_newton
+    assert stages.method_for(problem, job.starts) is quasi_newton
     found = descent.search(job)
     assert found.status == "converged"
     assert reference_infidelity(job, found.drive) <= GOAL
@@ -243,9 +243,9 @@ def test_large_problems_go_down_by_quasi_newton_steps(monkeypatch):
 
 def test_the_size_decides_the_method():
     nominal = make_problem(parse_job(job_text(4.2)), (3, 5))
-    assert descent.method_for(nominal, 32) is gauss_newton
+    assert stages.method_for(nominal, 32) is gauss_newton
     vast = make_problem(parse_job(job_text(60.0, slices=2000, tolerance=(0.05, 0.1))), (11, 15))
-    assert descent.method_for(vast, 200) is quasi_newton
+    assert stages.method_for(vast, 200) is quasi_newton
 
 
 # ---- over a tolerance box

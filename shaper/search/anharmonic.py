@@ -10,8 +10,9 @@ from shaper.bench import dense_grid, line_taps
 from shaper.job import Job
 from shaper.physics.ladder import Ladder
 from shaper.search.compiler import prepare
-from shaper.search.descent import Found, Leg, Progress, worst_counts
+from shaper.search.descent import Found, Leg, Progress
 from shaper.search.ladder import search_ladder
+from shaper.search.stages import worst_counts
 
 _POINTS, _DENSITY = (3, 3), 1.5  # least points of the grid; points per rad of reach
 _STARTS = 8  # more are not worth their time: nearly every start of this search arrives

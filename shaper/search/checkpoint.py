@@ -12,7 +12,6 @@ from pathlib import Path
 
 import numpy as np
 
-from shaper import __version__
 from shaper.errors import InputError
 from shaper.job import Job
 
@@ -42,7 +41,7 @@ class Checkpoint:
         interval: float = INTERVAL,
     ):
         self.path, self._write, self._resume, self._interval = path, write, resume, interval
-        whose = f"{__version__} {version('jaxlib')}\n{job.text}"
+        whose = f"{version('shaper')} {version('jaxlib')}\n{job.text}"
         self._job = hashlib.sha256(whose.encode()).hexdigest()
         self._last = time.monotonic()
 

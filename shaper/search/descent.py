@@ -10,22 +10,21 @@ scored.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 
 import jax
 import numpy as np
 
 from shaper.job import Job
-from shaper.search import gauss_newton, quasi_newton
 from shaper.search.checkpoint import Checkpoint
 from shaper.search.compiler import prepare
 from shaper.search.objective import (
-    Problem,
     all_infidelities,
     all_wish_costs,
     drive_of,
     make_problem,
 )
+from shaper.search.stages import Stage, method_for, stages, worst_counts
 from shaper.search.starts import starting_parameters
 
 STATUSES = {
@@ -38,34 +37,7 @@ STATUSES = {
 CHUNK = 10  # steps between two looks at progress, interruption and convergence
 STALL_CHUNKS = 3  # chunks of a relative gain below STALL_GAIN, and a start counts as stalled
 STALL_GAIN = 1e-3
-
-
-@dataclass(frozen=True)
-class Stage:
-    """A leg of the search.
-
-    Attributes:
-        name: for the progress line.
-        points: fewest of the Gauss-Lobatto grid along amplitude and detuning.
-        per_radian: points per rad of an error's reach, where that is more.
-        kept: number of starts that take part, the best ones; all if None.
-        powers: of the mean, one after the other.
-        steps: for each power; the job's iterations if None.
-    """
-
-    name: str
-    points: tuple[int, int]
-    per_radian: float
-    kept: int | None
-    powers: tuple[float, ...]
-    steps: int | None
-
-
-EXPLORE = Stage("exploring", (3, 5), 0.7, None, (1.0,), None)
-REFINE = Stage("refining", (7, 11), 1.5, 6, (1.0, 4.0, 16.0), 40)
-FINISH = Stage("finishing", (11, 15), 2.5, 2, (64.0, 256.0), 40)
-LARGEST_JACOBIAN = 3e7  # doubles, all starts together; beyond it quasi-Newton steps are taken
-MEASURED = 8  # starts that are measured on the score's grid at the end
+MEASURED = 8  # starts that are measured on the score's grid at once
 
 Progress = Callable[[str, int, int, float], None]  # stage, step, of how many, best infidelity
 
@@ -107,30 +79,6 @@ class Found:
     statuses: list[str]
     best: int
     history: dict[str, Leg]
-
-
-def method_for(problem: Problem, starts: int):
-    """The room with the steps that suit the size: Gauss-Newton unless its jacobians grow too big.
-
-    Measured on robust z rotations: a Gauss-Newton step leads as far as some hundred quasi-Newton
-    steps and costs as much as ten, as long as there are a few hundred error components.
-    """
-    size = problem.equations * 2 * problem.slices * starts
-    return gauss_newton if size <= LARGEST_JACOBIAN else quasi_newton
-
-
-def worst_counts(job: Job) -> bool:
-    """Whether a pulse is judged by its worst point over the box, and not by the mean."""
-    return job.minimize != "mean" or job.stop_infidelity is not None
-
-
-def stages(job: Job) -> tuple[Stage, ...]:
-    """The legs of this job's search."""
-    if not job.has_tolerance or job.minimize == "first_order":
-        return (EXPLORE,)
-    if job.minimize == "mean":
-        return (EXPLORE, replace(REFINE, powers=(1.0,)))
-    return (EXPLORE, REFINE, FINISH)
 
 
 def search(
