@@ -291,9 +291,9 @@ def test_a_robust_pulse_beats_the_textbook_one(robust):
 
 
 def test_stages_narrow_down(robust):
-    for name, stages in (("worst", ["exploring", "refining", "finishing"]), ("mean", None)):
+    for name, names in (("worst", ["exploring", "refining", "finishing"]), ("mean", None)):
         history = robust[name][1].history
-        assert list(history) == (stages or ["exploring", "refining"])
+        assert list(history) == (names or ["exploring", "refining"])
         sizes = [len(leg.starts) for leg in history.values()]
         assert sizes == sorted(sizes, reverse=True)
         for leg in history.values():
