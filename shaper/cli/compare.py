@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import sys
+from pathlib import Path
 
 _WIDTH = 100  # columns of running text
 FRAME_UPDATE = {
@@ -35,6 +36,11 @@ def add(commands):
         default=[],
         help="composite pulses of the library to set beside them: names, or all",
     )
+    command.add_argument(
+        "--data",
+        metavar="FOLDER",
+        help="where the files that the job names lie (default: beside FILE.h5)",
+    )
     command.add_argument("--json", action="store_true", help="print one JSON object")
     command.add_argument(
         "--figure", metavar="FILE", help="draw waveforms and cuts (.png, .svg, .pdf)"
@@ -48,7 +54,8 @@ def run(args) -> int:
     from shaper.store import load_waveform
     from shaper.workflow.compare import as_json, compare, draw, draw_maps
 
-    comparison = compare(load_waveform(args.file), args.against)
+    folder = Path(args.file).parent if args.data is None else Path(args.data)
+    comparison = compare(load_waveform(args.file), args.against, folder)
     for path, picture in ((args.figure, draw), (args.maps, draw_maps)):
         if path:
             for written in picture(comparison, path):
