@@ -37,7 +37,6 @@ LIBRARIES = {
     "optax": {"search"},
     "h5py": {"store"},
     "matplotlib": {"figures"},
-    "PIL": {"figures"},
     "scipy": {"physics", "drive", "bench", "composite", "search", "evidence", "workflow"},
     "pydantic": {"job", "awg"},
     "pyvisa": {"awg"},

@@ -16,6 +16,7 @@ from shaper.figures import style
 CONTOURS = (1e-5, 1e-4, 1e-3)
 LOWEST_SHOWN = 1e-7
 HIGHEST_SHOWN = 1e-1
+_TITLE_WIDTH = 24  # characters over one panel
 _PANELS_IN_ROW = 3
 # dark lines on the light part of the scale, light lines on the dark part
 _SHADES = {1e-5: "#ffffff", 1e-4: "#ffffff", 1e-3: "#101624"}
@@ -76,7 +77,7 @@ def map_figure(
                     zorder=5,
                 )
             )
-        ax.set_title(name)
+        ax.set_title(style.folded(name, _TITLE_WIDTH))
     for ax in panels[:, 0]:
         ax.set_ylabel("Amplitude error (%)")
     for k in range(columns):

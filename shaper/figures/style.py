@@ -12,6 +12,7 @@ import contextlib
 import functools
 import math
 import os
+import re
 import tempfile
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
@@ -25,14 +26,12 @@ from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.colors import LinearSegmentedColormap
 from matplotlib.figure import Figure
 from matplotlib.ticker import LogLocator, NullFormatter
-from PIL import Image
 
 from shaper.errors import InputError
 
 SUFFIXES = (".svg", ".pdf", ".png")
 PAGE_WIDTH = 7.2  # inches: the text width of a page
 MEASURE = "Average gate infidelity"  # what an infidelity is, unless the target says otherwise
-_PALETTE = 256  # colors of a bitmap
 _DPI = {".png": 200, ".svg": 120, ".pdf": 200}  # of a vector file: only of its maps, smooth anyway
 _LEGEND_HANDLE = 0.65  # inches a legend entry takes beside its text
 _LEGEND_LETTER = 0.072  # inches a letter
@@ -201,6 +200,16 @@ def legend_above(figure: Figure, handles: list, title: str = "") -> None:
     )
 
 
+def folded(name: str, width: int) -> str:
+    """A long name on several lines, broken at its hyphens."""
+    lines = [""]
+    for part in re.findall(r"[^-]+-?", name):
+        if lines[-1] and len(lines[-1] + part) > width:
+            lines.append("")
+        lines[-1] += part
+    return "\n".join(lines)
+
+
 def scientific(value: float) -> str:
     """Two digits and a power of ten, for labels.
 
@@ -291,15 +300,6 @@ def encoded(figure: Figure, suffix: str, theme: Theme = LIGHT) -> bytes:
     out = BytesIO()
     with _styled(theme):
         figure.savefig(out, format=suffix[1:], dpi=_DPI[suffix], metadata=undated)
-    return _fewer_colors(out.getvalue()) if suffix == ".png" else out.getvalue()
-
-
-def _fewer_colors(bitmap: bytes) -> bytes:
-    """The same PNG on a palette: a third of the size, no difference to the eye."""
-    out = BytesIO()
-    with Image.open(BytesIO(bitmap)) as image:
-        flat = image.convert("RGB").quantize(_PALETTE, dither=Image.Dither.NONE)
-        flat.save(out, format="PNG", optimize=True, dpi=(_DPI[".png"], _DPI[".png"]))
     return out.getvalue()
 
 
