@@ -194,7 +194,7 @@ FAULTS = {
     "infinity": (("t1_us = 60.0", "t1_us = inf"), ["qubit.t1_us: expected a finite number"]),
     "nan in a duration": (
         ("duration_ns = 60.0", "duration_ns = nan"),
-        ["pulse.duration_ns: expected a finite number or 'shortest', got nan"],
+        ["pulse.duration_ns: expected a finite number or 'shortest' or 'best', got nan"],
     ),
     "no drive": (("rabi_max_MHz = 25.0", "rabi_max_MHz = 0.0"), ["drive.rabi_max_MHz", "got 0"]),
     "negative tolerance": (
@@ -292,9 +292,14 @@ FAULTS = {
         ("duration_ns = 60.0", 'duration_ns = "shortest"'),
         ["pulse.duration_ns: expected search.stop_infidelity"],
     ),
+    "best without decay": (
+        ("duration_ns = 60.0", 'duration_ns = "best"'),
+        ["pulse.duration_ns: expected qubit.t1_us or qubit.t2_us"],
+    ),
 }
 # what else has to change for a fault to stand alone
 ALSO = {
+    "best without decay": [("t1_us = 60.0", ""), ("t2_us = 45.0", "")],
     "shortest without a goal": [("stop_infidelity = 1e-9\n", "")],
     "slopes of nothing": [
         ("amplitude = 0.02\ndetuning_MHz = 0.5\n", ""),

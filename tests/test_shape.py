@@ -12,9 +12,10 @@ from hypothesis import strategies as st
 from job_case import SLICES, Z90_LIMIT, job_text
 
 from shaper.job import parse_job
+from shaper.physics.decay import coherence_limit
 from shaper.rotation import matrix
 from shaper.search import descent
-from shaper.search.duration import search_shortest
+from shaper.search.duration import search_best, search_shortest
 from shaper.search.objective import drive_of, make_problem, wish_costs
 from shaper.search.shape import envelope, out_of_band, second_difference
 
@@ -161,3 +162,16 @@ def test_slices_of_no_duration_change_nothing():
     alone, padded = descent.search(job), descent.search(job, slices=SLICES)
     assert padded.drive.shape == alone.drive.shape == (60, 2)
     assert padded.infidelity == pytest.approx(alone.infidelity, rel=1e-6)
+
+
+def test_the_best_duration_trades_decay_against_the_gate():
+    """Without errors any time beyond the limit only decays, so the best is about the limit."""
+    text = job_text(4 * math.pi, search="starts = 4", more="[qubit]\nt1_us = 2.0\nt2_us = 1.0")
+    job = parse_job(text.replace(f"duration_ns = {SLICES}.0", 'duration_ns = "best"'))
+    tried = search_best(job)
+    durations = tried.slices * job.slice_duration
+    total = tried.infidelity + [coherence_limit(t, job.t1, job.t2) for t in durations]
+    assert tried.slices[np.argmin(total)] == tried.job.slices
+    length = tried.job.duration * job.rabi_max
+    assert 0.95 * Z90_LIMIT <= length <= 1.1 * Z90_LIMIT  # a little short may cost less than decay
+    assert np.max(total) > 1.1 * np.min(total)  # there was something to trade

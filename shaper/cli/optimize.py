@@ -53,10 +53,11 @@ def run(args) -> int:
     job = read_job(args.job)
     if args.shortest and job.stop_infidelity is None:
         raise InputError(f"{args.job}: --shortest needs search.stop_infidelity, got none")
-    job = replace(job, find_shortest=job.find_shortest or args.shortest)
-    if args.resume and (job.find_shortest or job.anharmonicity is not None):
+    if args.shortest:
+        job = replace(job, find_shortest=True, find_best=False)
+    if args.resume and (job.open_duration or job.anharmonicity is not None):
         raise InputError(
-            "--resume: expected a search with checkpoints; one for the shortest duration or on a "
+            "--resume: expected a search with checkpoints; one for the duration or on a "
             "ladder begins anew each time"
         )
     output = Path(args.output or Path(args.job).with_suffix(".h5").name)
@@ -91,7 +92,7 @@ def run(args) -> int:
     if not args.json:
         print(f"\n{output}" + (f"\n{args.figure}" if args.figure else ""))
     if waveform.status == "interrupted":
-        note = "" if job.find_shortest else "; go on with --resume"
+        note = "" if job.open_duration else "; go on with --resume"
         print(f"shaper: interrupted: the best so far is in {output}{note}", file=sys.stderr)
         return INTERRUPTED
     if not good:

@@ -15,6 +15,7 @@ from pydantic import BaseModel, ValidationError
 
 from shaper import rotation
 from shaper.errors import InputError
+from shaper.job.facts import LineFacts, MixerFacts, NoiseFacts, Shape
 from shaper.job.schema import ADDRESSED, GroupSection, JobFile, TargetSection
 from shaper.target import Target
 from shaper.units import DEG, MHZ, MSPS, NS, US
@@ -50,46 +51,6 @@ class Group:
     def has_tolerance(self) -> bool:
         """Whether there is a box to withstand for this qubit."""
         return self.amplitude_tolerance > 0 or self.detuning_tolerance > 0
-
-
-@dataclass(frozen=True)
-class LineFacts:
-    """What the job knows of the drive line; ``shaper.drive.line`` makes a model of it."""
-
-    kind: str
-    bandwidth: float | None  # Hz
-    file: Path | None
-    ports: tuple[int, int]  # to, from
-
-
-@dataclass(frozen=True)
-class MixerFacts:
-    """Calibrated mixer faults: Q gain, quadrature error (rad), offsets (rad/s), skew (s)."""
-
-    gain: float
-    phase: float
-    offset_i: float
-    offset_q: float
-    skew: float
-
-
-@dataclass(frozen=True)
-class NoiseFacts:
-    """Slow noise: rms detuning (rad/s), rms relative amplitude; file of a spectrum, or None."""
-
-    detuning_sigma: float
-    amplitude_sigma: float
-    detuning_spectrum: Path | None
-
-
-@dataclass(frozen=True)
-class Shape:
-    """Wishes for the look of the waveform: weights, a band (Hz) or None, a rise time (s)."""
-
-    smoothness: float
-    max_bandwidth: float | None
-    band_weight: float
-    rise: float
 
 
 @dataclass(frozen=True)
@@ -130,7 +91,13 @@ class Job:
     noise: NoiseFacts
     levels: int
     polish: bool
-    find_shortest: bool  # the duration is to be found; ``slices`` is then only a first guess
+    find_shortest: bool  # the duration is to be found; ``slices`` then says nothing
+    find_best: bool  # likewise, by the least worst case with decay
+
+    @property
+    def open_duration(self) -> bool:
+        """Whether the duration is to be found."""
+        return self.find_shortest or self.find_best
 
     @property
     def groups(self) -> tuple[Group, ...]:
@@ -249,7 +216,7 @@ def _in_si(
     tolerant = tolerant or any(g.amplitude_tolerance or g.detuning_tolerance for g in others)
     if stop is None and not tolerant:
         stop = _DEFAULT_STOP_NOMINAL
-    shortest = file.pulse.duration_ns == "shortest"
+    duration = file.pulse.duration_ns
     line, mixer, noise, shape = file.line, file.mixer, file.noise, file.shape
 
     def beside(name: str | None) -> Path | None:
@@ -273,7 +240,7 @@ def _in_si(
         equivalence=file.target.equivalence,
         amplitude_tolerance=tolerance.amplitude,
         detuning_tolerance=tolerance.detuning_MHz * MHZ,
-        slices=1 if shortest else round(file.pulse.duration_ns / file.pulse.slice_ns),
+        slices=1 if isinstance(duration, str) else round(duration / file.pulse.slice_ns),
         samples_per_slice=round(file.pulse.slice_ns * NS * drive.sample_rate_MSps * MSPS),
         starts=search.starts,
         iterations=search.iterations,
@@ -310,7 +277,8 @@ def _in_si(
         ),
         levels=qubit.levels,
         polish=drive.polish,
-        find_shortest=shortest,
+        find_shortest=duration == "shortest",
+        find_best=duration == "best",
     )
 
 

@@ -208,8 +208,9 @@ class ShapeSection(Section):
 class PulseSection(Section):
     """The waveform's clockwork."""
 
-    duration_ns: Positive | Literal["shortest"] = Field(
-        description='length of the waveform, or "shortest": what reaches stop_infidelity'
+    duration_ns: Positive | Literal["shortest", "best"] = Field(
+        description='length of the waveform; "shortest": what reaches stop_infidelity; '
+        '"best": least worst case with decay'
     )
     slice_ns: Positive = Field(description="length of a slice, a whole number of DAC samples")
 
@@ -277,11 +278,12 @@ class JobFile(Section):
                 f"(multiple of {1e3 / self.drive.sample_rate_MSps:.10g} ns), "
                 f"got {self.pulse.slice_ns:.10g} ns = {samples:.10g} samples"
             )
-        if self.pulse.duration_ns == "shortest":
+        open_duration = isinstance(self.pulse.duration_ns, str)
+        if open_duration:
             self._require_goal()
         else:
             self._require_whole_slices()
-        if 2 * self.shape.rise_ns > 0 and self.pulse.duration_ns != "shortest":
+        if 2 * self.shape.rise_ns > 0 and not open_duration:
             if 2 * self.shape.rise_ns >= self.pulse.duration_ns:
                 raise ValueError(
                     "shape.rise_ns: expected less than half of pulse.duration_ns = "
@@ -309,7 +311,7 @@ class JobFile(Section):
         """The search on a ladder knows one qubit, a fixed duration and no wishes."""
         unknown = {
             "group": bool(self.group),
-            "pulse.duration_ns": self.pulse.duration_ns == "shortest",
+            "pulse.duration_ns": isinstance(self.pulse.duration_ns, str),
             "search.minimize": self.search.minimize == "first_order",
             "shape": self.shape != ShapeSection(),
         }
@@ -321,6 +323,12 @@ class JobFile(Section):
                 )
 
     def _require_goal(self):
+        if self.pulse.duration_ns == "best":
+            if self.qubit.t1_us is None and self.qubit.t2_us is None:
+                raise ValueError(
+                    'pulse.duration_ns: expected qubit.t1_us or qubit.t2_us with "best", got none'
+                )
+            return
         tolerant = self.tolerance.amplitude or self.tolerance.detuning_MHz
         if tolerant and self.search.stop_infidelity is None:
             raise ValueError(

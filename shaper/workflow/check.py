@@ -38,7 +38,7 @@ def check_job(job: Job, trial: bool = False) -> dict:
     plain = place(sandwich(job.target, job.bound), job)
     samples = job.slices * job.samples_per_slice
     padded = padded_length(samples, job.granularity, job.min_samples)
-    fixed = not job.find_shortest
+    fixed = not job.open_duration
     asks = trial and fixed and job.has_tolerance and job.stop_infidelity is not None
     able = job.bound == "circle" and not job.others
     reached = trial_infidelity(job) if asks and able else None
@@ -122,7 +122,7 @@ def _warnings(
     job: Job, shortest: float, padding: int, line: Line | None, reached: float | None
 ) -> list[str]:
     found = [_frame(job), _drift(job), _line(job, line), _coarse(job)]
-    if not job.find_shortest:
+    if not job.open_duration:
         found = [
             _too_short(job, shortest),
             _too_few_slices(job),

@@ -10,11 +10,12 @@ from shaper.composite.limit import limit
 from shaper.composite.sandwich import sandwich
 from shaper.composite.sequence import place
 from shaper.job import Job, parse_job
+from shaper.physics.decay import coherence_limit
 from shaper.pulse import Score, Table, Waveform
 from shaper.search import descent
 from shaper.search.anharmonic import search_on_levels
 from shaper.search.checkpoint import Checkpoint
-from shaper.search.duration import Shortest, search_shortest
+from shaper.search.duration import Tried, search_best, search_shortest
 from shaper.units import NS
 from shaper.wiring import play
 from shaper.workflow.assemble import assemble
@@ -41,10 +42,11 @@ def optimize(
     """
     baseline = place(sandwich(job.target, job.bound), job)
     curve = {}
-    if job.find_shortest:
-        shortest = search_shortest(job, progress, stop)
-        job, found = shortest.job, shortest.found
-        curve = _curve(shortest)
+    if job.open_duration:
+        look = search_shortest if job.find_shortest else search_best
+        tried = look(job, progress, stop)
+        job, found = tried.job, tried.found
+        curve = _curve(tried)
     elif job.anharmonicity is not None:
         found = search_on_levels(job, progress, stop)
     else:
@@ -110,15 +112,22 @@ def _history(found: descent.Found) -> dict[str, Table]:
     return tables
 
 
-def _curve(shortest: Shortest) -> dict[str, Table]:
-    """Best infidelity against duration, as far as the search for the shortest came."""
-    durations = shortest.slices * shortest.job.slice_duration
-    return {
-        "duration_s": Table(durations, ("duration_s",), "s", "duration tried"),
+def _curve(tried: Tried) -> dict[str, Table]:
+    """Best infidelity against duration, as far as the search for the duration came."""
+    job, axes = tried.job, ("duration_s",)
+    durations = tried.slices * job.slice_duration
+    tables = {
+        "duration_s": Table(durations, axes, "s", "duration tried"),
         "best_infidelity": Table(
-            shortest.infidelity, ("duration_s",), "1", "best infidelity found at this duration"
+            tried.infidelity, axes, "1", "best infidelity found at this duration"
         ),
     }
+    if job.find_best:
+        decay = np.array([coherence_limit(t, job.t1, job.t2) for t in durations])
+        tables["infidelity_with_decay"] = Table(
+            tried.infidelity + decay, axes, "1", "the same, and what T1 and T2 take in this time"
+        )
+    return tables
 
 
 def draw(waveform: Waveform, path) -> None:
