@@ -11,6 +11,8 @@ from shaper.awg.profile import read_profile
 from shaper.errors import ShaperError
 from shaper.workflow.load import load_into_folder, load_into_instrument, plan_from
 
+if len(sys.argv) < 3:
+    sys.exit(__doc__)
 waveform, folder = sys.argv[1:3]
 
 try:

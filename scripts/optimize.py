@@ -5,6 +5,8 @@ from pathlib import Path
 
 import shaper
 
+if len(sys.argv) < 2:
+    sys.exit(__doc__)
 job_path = Path(sys.argv[1])
 output = sys.argv[2] if len(sys.argv) > 2 else Path("results") / job_path.with_suffix(".h5").name
 
