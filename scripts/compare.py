@@ -12,8 +12,6 @@ from shaper.cli.compare import text
 from shaper.errors import ShaperError
 from shaper.workflow.compare import compare, draw, draw_maps
 
-if len(sys.argv) < 2:
-    sys.exit(__doc__)
 waveform, *composites = sys.argv[1:] or ["results/z90.h5"]
 
 try:
