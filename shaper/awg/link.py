@@ -12,6 +12,7 @@ import importlib.util
 import select
 import socket
 import time
+from abc import ABC, abstractmethod
 from typing import Protocol
 
 from shaper.awg import block
@@ -61,7 +62,7 @@ class Link(Protocol):
         ...
 
 
-class Reader:
+class Reader(ABC):
     """Lines and blocks from two primitives, the same for every transport.
 
     A transport gives ``_exactly(count, deadline)`` and ``_line(limit, deadline)``; deadlines are
@@ -110,11 +111,13 @@ class Reader:
                 )
         return data
 
+    @abstractmethod
     def _exactly(self, count: int, deadline: float) -> bytes | bytearray:
-        raise NotImplementedError
+        """So many bytes, no more."""
 
+    @abstractmethod
     def _line(self, limit: int, deadline: float) -> bytes:
-        raise NotImplementedError
+        """All bytes up to a newline, which is not among them."""
 
 
 class SocketLink(Reader):

@@ -6,6 +6,8 @@ import json
 import sys
 from pathlib import Path
 
+from shaper.cli.arguments import add_against, add_data
+
 _WIDTH = 100  # columns of running text
 FRAME_UPDATE = {
     "enough": "the target as stated needs no pulse: shift the phase of all later pulses by the z "
@@ -29,18 +31,8 @@ def add(commands):
         epilog="Example: shaper compare z90_robust.h5 --against all --figure compare.png",
     )
     command.add_argument("file", metavar="FILE.h5", help="waveform file")
-    command.add_argument(
-        "--against",
-        metavar="NAME",
-        nargs="+",
-        default=[],
-        help="composite pulses of the library to set beside them: names, or all",
-    )
-    command.add_argument(
-        "--data",
-        metavar="FOLDER",
-        help="where the files that the job names lie (default: beside FILE.h5)",
-    )
+    add_against(command)
+    add_data(command)
     command.add_argument("--json", action="store_true", help="print one JSON object")
     command.add_argument(
         "--figure", metavar="FILE", help="draw waveforms and cuts (.png, .svg, .pdf)"

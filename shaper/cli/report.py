@@ -6,6 +6,8 @@ import argparse
 import json
 import sys
 
+from shaper.cli.arguments import add_against, add_data
+
 _EXAMPLE = """example:
   shaper report results/z90.h5                  writes results/z90.html
   shaper report results/z90.h5 --output -       prints the page"""
@@ -26,18 +28,8 @@ def add(commands):
     command.add_argument(
         "--output", metavar="FILE.html", help="where to write (default: FILE.html)"
     )
-    command.add_argument(
-        "--against",
-        metavar="NAME",
-        nargs="+",
-        default=[],
-        help="composite pulses of the library to set beside them: names, or all",
-    )
-    command.add_argument(
-        "--data",
-        metavar="DIR",
-        help="where the measured files that the job names lie (default: beside FILE.h5)",
-    )
+    add_against(command)
+    add_data(command)
     command.add_argument(
         "--json", action="store_true", help="print the tables behind the page instead"
     )

@@ -5,6 +5,8 @@ from __future__ import annotations
 import json
 import sys
 
+from shaper.cli.arguments import add_data
+
 _WIDTH = 100  # columns of running text
 NOT_CONFIRMED = 1
 
@@ -34,11 +36,7 @@ def add(commands):
         type=float,
         help="carrier frequency, where the job names none: adds the rotating-wave error",
     )
-    command.add_argument(
-        "--data",
-        metavar="FOLDER",
-        help="where the files that the job names lie (default: beside FILE.h5)",
-    )
+    add_data(command)
     command.add_argument("--json", action="store_true", help="print one JSON object")
     command.add_argument("--figure", metavar="FILE", help="draw the budget (.png, .svg, .pdf)")
     command.add_argument(

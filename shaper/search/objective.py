@@ -49,7 +49,7 @@ class Problem:
         floor: [] infidelity that is good enough: below it only the wishes count. Zero without
             wishes.
         bound: "circle" or "box".
-        longest_turn: rad; no slice turns further.
+        longest_turn: rad; no slice (with a line: no cell) turns further.
     """
 
     durations: Array
@@ -107,15 +107,20 @@ def make_problem(
     rate = (1 + np.max(np.abs(eps))) * (1.0 if job.bound == "circle" else np.sqrt(2))
     durations = np.zeros(slices or job.slices)
     durations[: job.slices] = step
-    taps = line_taps(job)
+    kernel = None if (taps := line_taps(job)) is None else taps.kernel
+    if kernel is not None:  # shorter steps, and a line may overshoot
+        step /= kernel.shape[1]
+        rate *= max(1.0, float(np.max(np.sum(np.abs(kernel), axis=0))))
+    shares = np.array([group.weight if scored else 1.0 for group in job.groups])
+    shares /= np.sum(shares)
     return Problem(
         durations=durations,
         eps=eps,
         delta=delta,
-        weight=np.concatenate([grid.weight for grid in grids]) / len(grids),
+        weight=np.concatenate([w * grid.weight for w, grid in zip(shares, grids, strict=True)]),
         rows=np.concatenate(rows, axis=2),
         envelope=shape.envelope(job, len(durations)),
-        kernel=None if taps is None else taps.kernel,
+        kernel=kernel,
         mix=_block_diagonal(mixes) if job.minimize == "first_order" else None,
         wishes={} if scored else shape.wishes(job, len(durations)),
         floor=(job.stop_infidelity or _GOOD_ENOUGH) if shape.wished(job) else 0.0,
