@@ -175,3 +175,12 @@ def test_the_best_duration_trades_decay_against_the_gate():
     length = tried.job.duration * job.rabi_max
     assert 0.95 * Z90_LIMIT <= length <= 1.1 * Z90_LIMIT  # a little short may cost less than decay
     assert np.max(total) > 1.1 * np.min(total)  # there was something to trade
+
+
+@pytest.mark.parametrize("look", [search_shortest, search_best])
+def test_a_stop_asked_for_at_once_still_leaves_a_waveform(look):
+    text = job_text(30 * 0.14, slices=30, search="starts = 4", more="[qubit]\nt1_us = 2.0")
+    tried = look(parse_job(text), stop=lambda: True)
+    assert len(tried.slices) == 1
+    assert len(tried.found.drive) == tried.job.slices
+    assert np.isfinite(tried.found.infidelity)

@@ -27,7 +27,6 @@ GROWTH = 1.3  # of the duration, until one succeeds
 _PATIENCE = 3  # durations in a row that improve nothing, and longer ones are not tried
 _ROUND = 32  # slices; array lengths are multiples of it
 _SLACK = 0.9  # of the box's best known limit, which is not proven to be one
-_LAST_TRIES = 1  # slices below the shortest success that get a second, wider search
 
 
 @dataclass(frozen=True)
@@ -120,7 +119,7 @@ def search_best(
         return min(totals, key=totals.get)
 
     guess, idle = max(_too_short(job) + 1, 2), 0
-    while idle < _PATIENCE and guess <= MAX_SLICES and not attempts.stop():
+    while idle < _PATIENCE and guess <= MAX_SLICES and (not totals or not attempts.stop()):
         if totals and coherence_limit(guess * job.slice_duration, job.t1, job.t2) > min(
             totals.values()
         ):
@@ -158,7 +157,7 @@ def search_shortest(
         return attempts.at(slices, starts, give_up=True).infidelity <= job.stop_infidelity
 
     works, guess = None, max(fails + 1, 2)
-    while works is None and not stop():
+    while works is None and (not tried or not stop()):  # one is tried in any case
         if guess > MAX_SLICES:
             raise ShaperError(
                 f"shortest: expected stop_infidelity = {job.stop_infidelity:g} within {MAX_SLICES} "
@@ -174,7 +173,7 @@ def search_shortest(
             works = middle
         else:
             fails = middle
-        if works - fails == 1 and works > _LAST_TRIES and fails in tried and not stop():
+        if works - fails == 1 and fails in tried and not stop():
             if reaches(fails, 2 * job.starts):  # once more, twice as wide
                 works, fails = fails, max((n for n in tried if n < fails), default=fails - 1)
     return attempts.result(works if works is not None else max(tried))
