@@ -18,6 +18,7 @@ from shaper.search import descent
 from shaper.search.duration import search_best, search_shortest
 from shaper.search.objective import drive_of, make_problem, wish_costs
 from shaper.search.shape import envelope, out_of_band, second_difference
+from shaper.workflow.optimize import optimize
 
 jax.config.update("jax_enable_x64", True)
 
@@ -184,3 +185,9 @@ def test_a_stop_asked_for_at_once_still_leaves_a_waveform(look):
     assert len(tried.slices) == 1
     assert len(tried.found.drive) == tried.job.slices
     assert np.isfinite(tried.found.infidelity)
+
+
+def test_a_duration_search_that_was_stopped_says_so():
+    text = job_text(30 * 0.14, slices=30, search="starts = 4")
+    waveform = optimize(replace(parse_job(text), find_shortest=True), stop=lambda: True)
+    assert waveform.status == "interrupted"

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import replace
 
 import numpy as np
 
@@ -47,6 +48,8 @@ def optimize(
         tried = look(job, progress, stop)
         job, found = tried.job, tried.found
         curve = _curve(tried)
+        if stop is not None and stop():  # it may have converged, but not on the duration
+            found = replace(found, status="interrupted")
     elif job.anharmonicity is not None:
         found = search_on_levels(job, progress, stop)
     else:
