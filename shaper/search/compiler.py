@@ -1,4 +1,4 @@
-"""How the compiler is set up: float64, and compiled programs kept for the next run.
+"""How the compiler is set up: float64, fast loops, and compiled programs kept for the next run.
 
 The one place where anything global is switched on, and only when a search is about to begin.
 """
@@ -11,10 +11,15 @@ import platform
 from pathlib import Path
 
 CACHE_SWITCH = "SHAPER_CACHE"  # environment: a folder, or "off"
+_FLAGS_KNOWN_TO = "0.10."  # jaxlib; one that does not know a flag would end the process
+_LARGEST_LOOP = 10**9  # bytes; loops below are one kernel each, not kernels called one by one
 
 
 def prepare() -> None:
-    """Switch JAX to float64 and point its compilation cache to the user's cache folder.
+    """Switch JAX to float64, set the compiler's flags, and point its cache to the user's folder.
+
+    The flags only count if JAX has compiled nothing yet, and a user's own ``XLA_FLAGS`` are left
+    alone. They make the engine two to three times faster at all sizes (DEVELOPERS.md).
 
     Programs are kept apart by library version and processor, since they are compiled for the
     processor at hand. ``SHAPER_CACHE=off`` keeps none, ``SHAPER_CACHE=FOLDER`` keeps them there. A
@@ -23,6 +28,7 @@ def prepare() -> None:
     import jax
 
     jax.config.update("jax_enable_x64", True)
+    os.environ.setdefault("XLA_FLAGS", " ".join(_flags()))
     folder = cache_folder()
     if folder is None:
         return
@@ -51,12 +57,27 @@ def cache_folder() -> Path | None:
     return base / f"jaxlib-{jaxlib.__version__}-{_processor()}"
 
 
-def _processor() -> str:
-    """A short name for this kind of processor and its instruction sets."""
-    features = platform.machine() + platform.processor()
+def _flags() -> list[str]:
+    """Loops in one piece, on vectors as wide as the processor's; none to an unknown version."""
+    import jaxlib
+
+    if not jaxlib.__version__.startswith(_FLAGS_KNOWN_TO):
+        return []
+    loops = f"xla_cpu_small_while_loop_byte_threshold={_LARGEST_LOOP}"
+    wide = ["--xla_cpu_prefer_vector_width=512"] if "avx512f" in _instruction_sets() else []
+    return [f"--xla_backend_extra_options={loops}", *wide]
+
+
+def _instruction_sets() -> str:
+    """As Linux lists them; empty elsewhere."""
     try:
         with open("/proc/cpuinfo") as file:
-            features += next((line for line in file if line.startswith(("flags", "Features"))), "")
+            return next((line for line in file if line.startswith(("flags", "Features"))), "")
     except OSError:
-        pass  # not Linux: the machine's name must do
+        return ""
+
+
+def _processor() -> str:
+    """A short name for this kind of processor and its instruction sets."""
+    features = platform.machine() + platform.processor() + _instruction_sets()
     return hashlib.sha256(features.encode()).hexdigest()[:12]

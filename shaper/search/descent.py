@@ -16,6 +16,7 @@ import jax
 import numpy as np
 
 from shaper.job import Job
+from shaper.search.batches import advance
 from shaper.search.checkpoint import Checkpoint
 from shaper.search.compiler import prepare
 from shaper.search.objective import (
@@ -172,8 +173,7 @@ class _Run:
         steps = stage.steps or self.job.iterations
         power = stage.powers[self.power_number]
         chunk = min(CHUNK, steps - self.done)
-        self.state, costs = self.method.advance(self.problem, self.state, power, chunk)
-        costs = np.asarray(costs)
+        self.state, costs = advance(self.method, self.problem, self.state, power, chunk)
         gain = costs[0] - costs[-1]
         self.idle = np.where(gain < STALL_GAIN, self.idle + 1, 0)
         self.costs.append(costs[1:] if self.costs else costs)
@@ -200,9 +200,9 @@ class _Run:
         return Leg(self.chosen, np.exp(np.concatenate(self.costs)).T, wishes)
 
     def _end_power(self, stage: Stage, power: float) -> None:
-        self.parameters[self.chosen] = np.asarray(self.state.parameters)
+        self.parameters[self.chosen] = self.state.parameters
         self.status[self.chosen] = np.where(self.idle >= STALL_CHUNKS, "stalled", "step_limit")
-        self.status[self.chosen[~np.isfinite(np.asarray(self.state.cost))]] = "nonfinite"
+        self.status[self.chosen[~np.isfinite(self.state.cost)]] = "nonfinite"
         rank = self._remember(self.chosen, power)
         order = np.argsort(rank)  # nan last
         if self.give_up and power == 1 and not np.nanmin(rank) <= self.job.stop_infidelity:
@@ -217,11 +217,11 @@ class _Run:
     def _look_for_goal(self) -> None:
         """Whether the leader meets the goal, on the score's grid too."""
         goal = self.job.stop_infidelity
-        found = np.asarray(self.state.worst)
+        found = self.state.worst
         if goal is None or self.problem.wishes or not np.any(found <= goal):
             return  # with wishes there is always something left to gain
         leader = int(np.nanargmin(found))
-        self.parameters[self.chosen] = np.asarray(self.state.parameters)
+        self.parameters[self.chosen] = self.state.parameters
         self._remember(self.chosen[leader : leader + 1], power=1.0)
         self.reached = self.best_score <= goal
 
@@ -259,7 +259,7 @@ class _Run:
         number = min(self.stage_number, len(self.stages) - 1)
         stage = self.stages[number]
         steps = stage.steps or self.job.iterations
-        here = np.asarray(self.state.worst)
+        here = self.state.worst
         best = min(self.best_score, np.nanmin(here) if np.any(np.isfinite(here)) else np.inf)
         done = self.power_number * steps + self.done
         return stage.name, done, steps * len(stage.powers), float(best)
@@ -267,7 +267,7 @@ class _Run:
     def found(self) -> Found:
         """The best ever seen, and what became of every start."""
         if self.interrupted and self.stage_number < len(self.stages):
-            self.parameters[self.chosen] = np.asarray(self.state.parameters)
+            self.parameters[self.chosen] = self.state.parameters
             self._remember(self.chosen, power=1.0)
             if self.costs:
                 self.legs.append(self._leg())
@@ -295,7 +295,7 @@ class _Run:
         if self.stage_number < len(self.stages):
             kept |= {name: np.asarray(getattr(self, name)) for name in ("chosen", "idle", "done")}
             leaves = jax.tree_util.tree_leaves(self.state)
-            kept |= {f"state_{k}": np.asarray(leaf) for k, leaf in enumerate(leaves)}
+            kept |= {f"state_{k}": leaf for k, leaf in enumerate(leaves)}
             if self.costs:
                 kept["costs"] = np.concatenate(self.costs)
             for name in self.wish_costs[0] if self.wish_costs else ():

@@ -127,14 +127,24 @@ def _wish_equations(problem: Problem, parameters: Array, size: Array) -> tuple[A
     return jacobian.reshape(len(jacobian), -1), (matrix @ drive).T.ravel()
 
 
+# One start after the other: on a batch, LAPACK's wrapper waits for threads of the pool it runs in,
+# and two programs that do so at once wait for each other for ever.
+_cholesky = jax.custom_batching.sequential_vmap(jnp.linalg.cholesky)
+
+
+@jax.custom_batching.sequential_vmap
+def _solve(factor: Array, r: Array) -> Array:
+    return jax.scipy.linalg.cho_solve((factor, True), r)
+
+
 def _damped_solver(jacobian: Array, damping: Array):
     """r -> the step s [parameter] with least |J s + r|^2 + damping |s|^2, in the smaller space."""
     count, parameters = jacobian.shape
     if count < parameters:
-        factor = jax.scipy.linalg.cho_factor(jacobian @ jacobian.T + damping * jnp.eye(count))
-        return lambda r: -jacobian.T @ jax.scipy.linalg.cho_solve(factor, r)
-    factor = jax.scipy.linalg.cho_factor(jacobian.T @ jacobian + damping * jnp.eye(parameters))
-    return lambda r: -jax.scipy.linalg.cho_solve(factor, jacobian.T @ r)
+        factor = _cholesky(jacobian @ jacobian.T + damping * jnp.eye(count))
+        return lambda r: -jacobian.T @ _solve(factor, r)
+    factor = _cholesky(jacobian.T @ jacobian + damping * jnp.eye(parameters))
+    return lambda r: -_solve(factor, jacobian.T @ r)
 
 
 def _accelerated_step(problem: Problem, power: Array, parameters: Array, damping: Array) -> Array:

@@ -48,9 +48,9 @@ def _optimizer() -> optax.GradientTransformationExtraArgs:
 
 def begin(problem: Problem, parameters: np.ndarray) -> State:
     """The state before the first step; parameters [start, slice, 2] rad."""
-    parameters = jnp.asarray(parameters)
-    unknown = jnp.full(len(parameters), jnp.nan)
-    return State(parameters, jax.vmap(_optimizer().init)(parameters), unknown, unknown)
+    unknown = np.full(len(parameters), np.nan)
+    memory = jax.vmap(_optimizer().init)(jnp.asarray(parameters))
+    return State(parameters, jax.tree.map(np.asarray, memory), unknown, unknown)
 
 
 def _step(problem: Problem, power: Array, parameters: Array, memory: optax.OptState):
