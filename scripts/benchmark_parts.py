@@ -168,7 +168,7 @@ def cores(count: int, grid: int, starts: int = 32, slices: int = 80) -> dict:
         return jax.lax.scan(lambda m, _: (step(m), None), many, None, length=100)[0]
 
     many = np.random.default_rng(1).normal(size=(starts, slices, 2)) * 0.1
-    parts = [jnp.asarray(many[chosen]) for chosen in batches(starts)]
+    parts = [jnp.asarray(many[chosen]) for chosen in batches(starts, grid)]
     program = jax.jit(descend)
     program.lower(parts[0]).compile()
     with ThreadPoolExecutor(count) as threads:

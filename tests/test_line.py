@@ -94,6 +94,21 @@ def test_area_is_kept_and_sidebands_turn(rng):
         assert np.max(np.abs(turned - np.stack([-arrived[:, 1], arrived[:, 0]], -1))) < EXACT
 
 
+@pytest.mark.parametrize("slices", [1, 9, 70])
+@pytest.mark.parametrize("turn", [1, np.exp(0.3j)])
+def test_gathered_is_the_transpose_of_filtered(rng, slices, turn):
+    """<slope, filtered(drive)> = <gathered(slope), drive>, for NumPy and JAX arrays alike."""
+    kernel = lines.taps(lines.first_order(90e6), NS, 4).kernel * turn
+    drive = rng.normal(size=(slices, 2))
+    arrived = lines.filtered(kernel, drive)
+    slope = rng.normal(size=(*arrived.shape, 3, 2))
+    expected = np.einsum("sc...,sc->...", slope, arrived)
+    for make in (np.asarray, jnp.asarray):
+        found = lines.gathered(kernel, make(slope))
+        assert found.shape == (slices, 2, 3, 2)
+        assert np.einsum("sc...,sc->...", found, drive) == pytest.approx(expected, abs=EXACT)
+
+
 def test_numpy_and_jax_agree(rng):
     drive = rng.normal(size=(9, 2))
     kernel = lines.taps(lines.first_order(90e6), NS, 4).kernel

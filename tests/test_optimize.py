@@ -78,9 +78,9 @@ def test_the_file_says_where_it_comes_from(run):
     assert found.pulses["sandwich"].origin == "composite"
     assert found.pulses["sandwich"].source
     names = found.history_attrs["start_names"].split()
-    assert len(names) == len(found.history_attrs["start_statuses"].split()) == 32
+    assert len(names) == len(found.history_attrs["start_statuses"].split()) == 128
     history = found.history["infidelity"].values
-    assert history.shape == (32, len(found.history["iteration"].values))
+    assert history.shape == (128, len(found.history["iteration"].values))
     assert np.nanmin(history[found.history_attrs["best_start"]]) <= GOAL
 
 

@@ -21,7 +21,7 @@ from shaper.drive.bound import quadratures
 from shaper.job import parse_job
 from shaper.physics.propagate import propagate
 from shaper.rotation import about_z, matrix
-from shaper.search import descent, gauss_newton, quasi_newton, stages
+from shaper.search import batches, descent, gauss_newton, quasi_newton, stages
 from shaper.search.objective import infidelities, log_power_mean, make_problem
 from shaper.search.starts import starting_parameters
 from shaper.target import Target, infidelity
@@ -188,8 +188,8 @@ def test_progress_tells_stage_step_and_the_best_so_far(too_short):
 
 
 def test_every_start_has_a_status_with_a_remedy(too_short):
-    _, found, _ = too_short
-    assert len(found.statuses) == len(found.names) == 32
+    job, found, _ = too_short
+    assert len(found.statuses) == len(found.names) == job.starts
     assert set(found.statuses) <= set(descent.STATUSES)
     assert found.status == found.statuses[found.best]
 
@@ -225,9 +225,32 @@ def test_weights_of_the_steps_hold_the_gradient_of_the_power_mean(rng):
     for power in (1.0, 4.0, 64.0):
         slope = np.asarray(slope_of(parameters, power)).ravel()
         lean, residual = gauss_newton._lean(problem, errors, power)
-        found = np.asarray(lean(jacobian).reshape(errors.size, -1).T @ residual.ravel())
+        found = np.asarray(lean(jacobian).reshape(-1, errors.size) @ residual.ravel())
         cosine = found @ slope / (np.linalg.norm(found) * np.linalg.norm(slope))
         assert cosine == pytest.approx(1, abs=1e-12)
+
+
+@pytest.mark.parametrize("points", [1, 15, 400])
+def test_every_start_is_in_a_batch_and_batches_are_alike(points):
+    for starts in (1, 2, 7, 16, 33, 100):
+        dealt = batches.batches(starts, points)
+        assert len({len(batch) for batch in dealt}) == 1
+        assert sorted(set(np.concatenate(dealt))) == list(range(starts))
+        spare = sum(map(len, dealt)) - starts
+        assert 0 <= spare < len(dealt) or spare == 0
+
+
+def test_the_number_of_cores_changes_nothing(monkeypatch):
+    """Bit for bit: batches depend on the job only."""
+    job = replace(parse_job(job_text(3.0, slices=20, tolerance=(0.05, 0.1))), starts=9)
+    job = replace(job, iterations=20)
+    found = []
+    for count in (1, 3):
+        monkeypatch.setattr(batches, "cores", lambda count=count: count)
+        found.append(descent.search(job))
+    assert np.array_equal(found[0].drive, found[1].drive)
+    for name, leg in found[0].history.items():
+        assert np.array_equal(leg.infidelity, found[1].history[name].infidelity, equal_nan=True)
 
 
 def test_large_problems_go_down_by_quasi_newton_steps(monkeypatch):

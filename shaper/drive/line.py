@@ -27,6 +27,7 @@ SETTLED = 1e-6  # share of a step still missing where the tail is cut
 HALF_POWER = np.log(2) / 2  # |H|^2 = 1/2 at the bandwidth of a Gaussian line
 CHANGE_WHEN_DOUBLED = 1e-9  # infidelity; what a finer grid may still change
 FINEST = 256  # cells per slice at most
+_BLOCK = 32  # slices whose slopes are gathered by one matrix product
 _GAUSSIAN_REACH = 5.0  # standard deviations; the error function misses 3e-7 beyond
 
 
@@ -188,7 +189,8 @@ def taps(line: Line, slice_duration: float, cells: int) -> Taps:
     edges = np.arange((lead + tail + 1) * cells + 1) / cells - lead
     area = line.ramp(edges * slice_duration) - line.ramp((edges - 1) * slice_duration)
     kernel = np.diff(area) * cells / slice_duration
-    return Taps(np.asarray(kernel, dtype=complex).reshape(-1, cells), lead)
+    kernel = kernel if np.any(np.imag(kernel)) else np.real(kernel)
+    return Taps(kernel.reshape(-1, cells), lead)
 
 
 def whole(count: float) -> int:
@@ -200,7 +202,7 @@ def filtered(kernel: np.ndarray, drive: np.ndarray) -> np.ndarray:
     """The drive at the qubit, as cell means; linear, for NumPy and JAX arrays alike.
 
     Args:
-        kernel: [tap, cell] complex, of ``Taps``.
+        kernel: [tap, cell], of ``Taps``.
         drive: [slice, 2] rad/s.
     Returns:
         [(slice + tap - 1) * cell, 2] rad/s; begins ``lead`` slices before the waveform.
@@ -212,10 +214,48 @@ def filtered(kernel: np.ndarray, drive: np.ndarray) -> np.ndarray:
     source = np.where((source >= 0) & (source < slices), source, slices)
     padded = xp.concatenate([drive, xp.zeros((1, 2), dtype=drive.dtype)])
     windows = padded[source]  # [output slice, tap, 2]
-    keep, swap = xp.asarray(kernel.real), xp.asarray(kernel.imag)
-    x = windows[..., 0] @ keep - windows[..., 1] @ swap
-    y = windows[..., 1] @ keep + windows[..., 0] @ swap
+    keep = xp.asarray(kernel.real)
+    x, y = windows[..., 0] @ keep, windows[..., 1] @ keep
+    if np.issubdtype(kernel.dtype, np.complexfloating):
+        swap = xp.asarray(kernel.imag)
+        x, y = x - windows[..., 1] @ swap, y + windows[..., 0] @ swap
     return xp.stack([xp.reshape(x, (-1,)), xp.reshape(y, (-1,))], axis=-1)
+
+
+def gathered(kernel: np.ndarray, slope: np.ndarray) -> np.ndarray:
+    """The transpose of ``filtered``: slopes by cells to slopes by slices, many at once.
+
+    Block by block, for a block's slices answer to the same few cells by the same matrix.
+
+    Args:
+        kernel: [tap, cell], of ``Taps``; real if the line turns no quadrature into the other.
+        slope: [(slice + tap - 1) * cell, 2, ...] of anything by the drive at the qubit.
+    Returns:
+        [slice, 2, ...] of it by what is played.
+    """
+    xp = slope.__array_namespace__()
+    count, cells = kernel.shape
+    slices = slope.shape[0] // cells - count + 1
+    blocks = -(-slices // _BLOCK)
+    size = -(-slices // blocks)
+    width = size + count - 1
+    tap = np.arange(width)[None, :] - np.arange(size)[:, None]
+    tap = np.where((tap >= 0) & (tap < count), tap, count)  # the last stands for none
+    matrix = xp.concatenate([kernel, xp.zeros((1, cells), dtype=kernel.dtype)])[tap]
+    matrix = xp.reshape(matrix, (size, width * cells))
+    missing = (blocks * size - slices) * cells
+    slope = xp.concatenate([slope, xp.zeros((missing, *slope.shape[1:]), dtype=slope.dtype)])
+    turns = np.issubdtype(kernel.dtype, np.complexfloating)
+    parts = []
+    for first in range(0, blocks * size, size):
+        window = slope[first * cells : (first + width) * cells]
+        flat = xp.reshape(window, (width * cells, -1))
+        part = xp.reshape(matrix.real @ flat, (size, *slope.shape[1:]))
+        if turns:
+            swapped = xp.reshape(matrix.imag @ flat, (size, *slope.shape[1:]))
+            part = part + xp.stack([swapped[:, 1], -swapped[:, 0]], axis=1)
+        parts.append(part)
+    return xp.concatenate(parts)[:slices]
 
 
 def cells_needed(

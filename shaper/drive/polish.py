@@ -157,7 +157,11 @@ def error_slope(
         moved = product(product(later, small), conjugate(later))
         parts.append(np.einsum("ki,sgi->gks", error_rows, product(moved, total)))
     slope = np.stack(parts, axis=-1)  # [grid, k, slice, 2]
-    return slope if kernel is None else _through_line(slope, kernel, len(drive))
+    if kernel is None:
+        return slope
+    from shaper.drive.line import gathered
+
+    return np.moveaxis(gathered(kernel, np.moveaxis(slope, (2, 3), (0, 1))), (0, 1), (2, 3))
 
 
 def _at_qubit(drive, kernel, sample_rate) -> tuple[np.ndarray, float]:
@@ -173,21 +177,6 @@ def _errors(drive, kernel, sample_rate, eps, delta, error_rows) -> np.ndarray:
     """[grid, k]; the sign of the quaternion is that of its overlap with the target."""
     fine, duration = _at_qubit(drive, kernel, sample_rate)
     return propagate(fine, np.full(len(fine), duration), eps, delta) @ error_rows.T
-
-
-def _through_line(slope: np.ndarray, kernel: np.ndarray, samples: int) -> np.ndarray:
-    """Chain rule: slope by fine slices to slope by samples (the transpose of ``filtered``)."""
-    count, cells = kernel.shape
-    grid, k = slope.shape[:2]
-    by_slice = slope.reshape(grid, k, -1, cells, 2)
-    out = np.zeros((grid, k, samples, 2))
-    for tap in range(count):
-        keep, swap = kernel[tap].real, kernel[tap].imag
-        x = by_slice[:, :, tap : tap + samples, :, 0]
-        y = by_slice[:, :, tap : tap + samples, :, 1]
-        out[..., 0] += x @ keep + y @ swap
-        out[..., 1] += y @ keep - x @ swap
-    return out
 
 
 def _allowed(codes, rounded, top, bound, rng) -> tuple[np.ndarray, np.ndarray]:

@@ -218,7 +218,7 @@ class PulseSection(Section):
 class Search(Section):
     """How the waveform is looked for; all optional."""
 
-    starts: int = Field(32, ge=1, le=4096, description="number of starting waveforms")
+    starts: int = Field(128, ge=1, le=4096, description="number of starting waveforms")
     iterations: int = Field(
         100, ge=1, le=1_000_000, description="most exploring steps of each start"
     )

@@ -15,7 +15,8 @@ import numpy as np
 
 from shaper.search.objective import Problem
 
-_LARGEST = 8  # starts; of more, the compiler deals single kernels out, which take microseconds
+_LARGEST = 8  # starts
+_LONGEST = 128  # starts times grid points: long enough for the processor's vectors
 
 
 def cores() -> int:
@@ -25,16 +26,27 @@ def cores() -> int:
     return os.cpu_count() or 1
 
 
-def batches(starts: int) -> list[np.ndarray]:
-    """Indices of the starts of each batch, all of one size; the last may hold some twice."""
-    size = min(-(-starts // cores()), _LARGEST)
+def batches(starts: int, points: int) -> list[np.ndarray]:
+    """Indices of the starts of each batch, all of one size; the last may hold some twice.
+
+    Does not depend on the number of cores, so that results do not either.
+
+    Args:
+        starts: how many there are.
+        points: of the grid.
+    """
+    largest = min(_LARGEST, max(1, _LONGEST // points))
+    size = -(-starts // -(-starts // largest))
     return [np.arange(first, first + size) % starts for first in range(0, starts, size)]
 
 
 def advance(method: ModuleType, problem: Problem, state, power: float, steps: int):
     """``method.advance`` for all starts, on all cores; arguments and result as there, as arrays."""
     starts = len(state.parameters)
-    parts = [jax.tree.map(lambda leaf, part=part: leaf[part], state) for part in batches(starts)]
+    parts = [
+        jax.tree.map(lambda leaf, chosen=chosen: leaf[chosen], state)
+        for chosen in batches(starts, problem.eps.size)
+    ]
     # once, or each thread would compile it
     method.advance.lower(problem, parts[0], power, steps).compile()
 

@@ -30,6 +30,7 @@ import jax
 import jax.numpy as jnp
 import numpy as np
 
+from shaper.drive.line import gathered
 from shaper.physics import two_level
 from shaper.search.objective import (
     Problem,
@@ -77,7 +78,7 @@ def _lean(problem: Problem, errors: Array, power: Array):
     """The linear map that brings the power mean to least squares, at these errors.
 
     Returns:
-        the map of [row, grid, ...] arrays, and the residual [row, grid].
+        the map of [..., row, grid] arrays, and the residual [row, grid].
     """
     squared = jnp.sum(errors * errors, axis=0)  # [grid]
     lean = problem.weight * (squared / (jnp.max(squared) + _TINY)) ** (power - 1)
@@ -86,35 +87,40 @@ def _lean(problem: Problem, errors: Array, power: Array):
     stretch = jnp.sqrt(2 * power - 1)
 
     def apply(change: Array) -> Array:
-        along = jnp.einsum("rg,rg...->g...", unit, change)
-        stretched = change + (stretch - 1) * jnp.einsum("rg,g...->rg...", unit, along)
-        return jnp.einsum("g,rg...->rg...", f, stretched)
+        along = jnp.sum(unit * change, axis=-2, keepdims=True)
+        return f * (change + (stretch - 1) * unit * along)
 
     return apply, f * errors / stretch
 
 
 def _jacobian(problem: Problem, parameters: Array) -> tuple[Array, Array]:
-    """Errors [row, point] and their derivative [row, point, parameter]."""
-    (drive, durations), pull_back = jax.vjp(
-        lambda p: at_qubit(problem, drive_of(problem, p)), parameters
-    )
+    """Errors [row, point] and their derivative [slice, 2, row, point].
+
+    Points stay the last axis throughout, the long one that the processor's vectors run along.
+    """
+    drive = drive_of(problem, parameters)
+    arriving, durations = at_qubit(problem, drive)
     errors, jacobian = two_level.errors_and_jacobian(
-        drive, durations, problem.eps, problem.delta, problem.rows, problem.longest_turn
+        arriving, durations, problem.eps, problem.delta, problem.rows, problem.longest_turn
     )
     if problem.mix is not None:
         errors, jacobian = errors @ problem.mix.T, jacobian @ problem.mix.T
-    # one cotangent of the drive per error component: [residual, cell, 2]
-    jacobian = jnp.moveaxis(jacobian.reshape(len(durations), 2, -1), -1, 0)
-    still = jnp.zeros_like(durations)
-    jacobian = jax.vmap(lambda g: pull_back((g, still))[0])(jacobian)
-    return errors, jacobian.reshape(*errors.shape, -1)
+    if problem.kernel is not None:
+        jacobian = gathered(problem.kernel, jacobian)
+    # a slice's drive depends on its own two parameters only
+    turned = [
+        jax.jvp(partial(drive_of, problem), (parameters,), (jnp.zeros_like(drive) + along,))[1]
+        for along in jnp.eye(2)
+    ]
+    jacobian = [sum(slope[:, c, None, None] * jacobian[:, c] for c in (0, 1)) for slope in turned]
+    return errors, jnp.stack(jacobian, axis=1)
 
 
 def _wish_equations(problem: Problem, parameters: Array, size: Array) -> tuple[Array, Array]:
     """The wishes in least-squares form, beside errors of mean square ``size``.
 
     Returns:
-        jacobian [equation, parameter] and residual [equation].
+        jacobian [parameter, equation] and residual [equation].
     """
     drive, pull_back = jax.vjp(lambda p: drive_of(problem, p), parameters)
     matrix = jnp.concatenate([jnp.sqrt(w * size) * m for m, w in problem.wishes.values()])
@@ -124,7 +130,7 @@ def _wish_equations(problem: Problem, parameters: Array, size: Array) -> tuple[A
         for order in ([0, 1], [1, 0])
     ]
     jacobian = jax.vmap(lambda g: pull_back(g)[0])(jnp.concatenate(blocks))
-    return jacobian.reshape(len(jacobian), -1), (matrix @ drive).T.ravel()
+    return jacobian.reshape(len(jacobian), -1).T, (matrix @ drive).T.ravel()
 
 
 # One start after the other: on a batch, LAPACK's wrapper waits for threads of the pool it runs in,
@@ -138,32 +144,35 @@ def _solve(factor: Array, r: Array) -> Array:
 
 
 def _damped_solver(jacobian: Array, damping: Array):
-    """r -> the step s [parameter] with least |J s + r|^2 + damping |s|^2, in the smaller space."""
-    count, parameters = jacobian.shape
+    """r -> the step s [parameter] with least |J^T s + r|^2 + damping |s|^2, in the smaller space.
+
+    The jacobian is [parameter, equation].
+    """
+    parameters, count = jacobian.shape
     if count < parameters:
-        factor = _cholesky(jacobian @ jacobian.T + damping * jnp.eye(count))
-        return lambda r: -jacobian.T @ _solve(factor, r)
-    factor = _cholesky(jacobian.T @ jacobian + damping * jnp.eye(parameters))
-    return lambda r: -_solve(factor, jacobian.T @ r)
+        factor = _cholesky(jacobian.T @ jacobian + damping * jnp.eye(count))
+        return lambda r: -jacobian @ _solve(factor, r)
+    factor = _cholesky(jacobian @ jacobian.T + damping * jnp.eye(parameters))
+    return lambda r: -_solve(factor, jacobian @ r)
 
 
 def _accelerated_step(problem: Problem, power: Array, parameters: Array, damping: Array) -> Array:
     """The damped Gauss-Newton step with its bend, [slice, 2] rad."""
     errors, jacobian = _jacobian(problem, parameters)
     lean, residual = _lean(problem, errors, power)
-    jacobian, residual = lean(jacobian).reshape(errors.size, -1), residual.ravel()
+    jacobian, residual = lean(jacobian).reshape(-1, errors.size), residual.ravel()
     if problem.wishes:
         found = jnp.sum(errors**2, axis=0)
         mean = jnp.exp(log_power_mean(found, problem.weight, power))
         size = (2 * power - 1) * jnp.sum(residual**2) * (1 + problem.floor / mean)
         wish_jacobian, wish_residual = _wish_equations(problem, parameters, size)
-        jacobian = jnp.concatenate([jacobian, wish_jacobian])
+        jacobian = jnp.concatenate([jacobian, wish_jacobian], axis=1)
         residual = jnp.concatenate([residual, wish_residual])
     solve = _damped_solver(jacobian, damping)
     step = solve(residual)
     ahead = rotation_errors(problem, parameters + _AHEAD * step.reshape(parameters.shape))
     change = lean(ahead - errors).ravel() / _AHEAD
-    curvature = 2 / _AHEAD * (change - jacobian[: errors.size] @ step)
+    curvature = 2 / _AHEAD * (change - step @ jacobian[:, : errors.size])
     curvature = jnp.pad(curvature, (0, len(residual) - errors.size))  # wishes are nearly linear
     bend = 0.5 * solve(curvature)
     most = _MOST_BEND * jnp.linalg.norm(step)

@@ -31,8 +31,8 @@ class Stage:
 
 
 EXPLORE = Stage("exploring", (3, 5), 0.7, None, (1.0,), None)
-REFINE = Stage("refining", (7, 11), 1.5, 6, (1.0, 4.0, 16.0), 40)
-FINISH = Stage("finishing", (11, 15), 2.5, 2, (64.0, 256.0), 40)
+REFINE = Stage("refining", (11, 15), 2.5, 8, (1.0, 4.0, 16.0), 40)
+FINISH = Stage("finishing", (11, 15), 2.5, 3, (64.0, 256.0), 40)  # the grid again: one program
 LARGEST_JACOBIAN = 3e7  # doubles, all starts together; beyond it quasi-Newton steps are taken
 
 
