@@ -36,7 +36,8 @@ Array = jax.Array
 
 MOST_LEVELS = 5
 LARGEST_NORM = 1.5  # of H dt; a slice that exceeds it is cut into equal parts
-WIDEST_BLOCK = 256  # grid points carried at once: their series must stay in the cache
+WIDEST_BLOCK = 32  # grid points carried at once: their series must stay in the fastest cache
+_VECTOR = 8  # doubles in the longest vector; blocks are multiples: rests go one by one
 _TRUNCATION = 2e-16  # of a slice's elements: no more than their own round-off
 
 
@@ -342,7 +343,7 @@ def propagate_qubit(
     step = jnp.asarray(duration / steps.cuts, dtype=drive.dtype)
     grid = eps.shape[0]
     blocks = -(-grid // WIDEST_BLOCK)
-    width = -(-grid // blocks)
+    width = -(-grid // (blocks * _VECTOR)) * _VECTOR if grid > 1 else 1
     # the last block is filled up with copies of its last point, dropped again below
     index = jnp.minimum(jnp.arange(blocks * width), grid - 1).reshape(blocks, width)
     end = jax.lax.map(
