@@ -292,6 +292,14 @@ FAULTS = {
         ("duration_ns = 60.0", 'duration_ns = "shortest"'),
         ["pulse.duration_ns: expected search.stop_infidelity"],
     ),
+    "weight of what cannot leak": (
+        ("seed = 7", "seed = 7\nleakage_weight = 10.0"),
+        ["search.leakage_weight: expected qubit.anharmonicity_MHz with it", "got 10 and no"],
+    ),
+    "leakage that weighs nothing": (
+        ("seed = 7", "seed = 7\nleakage_weight = 0.0"),
+        ["search.leakage_weight", "got 0.0"],
+    ),
     "best without decay": (
         ("duration_ns = 60.0", 'duration_ns = "best"'),
         ["pulse.duration_ns: expected qubit.t1_us or qubit.t2_us"],
@@ -299,6 +307,7 @@ FAULTS = {
 }
 # what else has to change for a fault to stand alone
 ALSO = {
+    "weight of what cannot leak": [("anharmonicity_MHz = -210.0\n", "")],
     "best without decay": [("t1_us = 60.0", ""), ("t2_us = 45.0", "")],
     "shortest without a goal": [("stop_infidelity = 1e-9\n", "")],
     "slopes of nothing": [

@@ -9,8 +9,10 @@ from scipy.linalg import expm
 from shaper import rotation
 from shaper.drive.line import filtered, first_order, taps
 from shaper.errors import InputError
+from shaper.job import parse_job
 from shaper.physics import leakage, two_level
 from shaper.physics.ladder import Ladder, derivative_corrected, plan, propagate_qubit
+from shaper.search.anharmonic import search_on_levels
 from shaper.search.ladder import search_ladder
 from shaper.target import Target, infidelity
 
@@ -250,6 +252,54 @@ def test_search_through_a_line():
     assert pedersen(u[:2, :2], rotation.matrix(HALF_TURN.quaternion)) < 1e-10
     u = textbook(TRANSMON, found.drive, 0.5 * NS)
     assert pedersen(u[:2, :2], rotation.matrix(HALF_TURN.quaternion)) > 1e-5
+
+
+def test_leakage_weight_of_the_job_trades_rotation_for_leakage():
+    """Half a turn in 3 ns: too short for both, so the optimum follows the weight.
+
+    The more lost population counts, the less is lost and the more the rotation is off: true of
+    the minimum of any weighted sum.
+    """
+    text = """
+        [qubit]
+        anharmonicity_MHz = -210.0
+        [drive]
+        rabi_max_MHz = 300.0
+        sample_rate_MSps = 4000.0
+        [target]
+        gate = "x"
+        angle_deg = 180.0
+        [pulse]
+        duration_ns = 3.0
+        slice_ns = 0.25
+        [search]
+        starts = 2
+        leakage_weight = {}
+        """
+    leaked, rotated = [], []
+    for weight in (1.0, 100.0):
+        job = parse_job(text.format(weight))
+        assert job.leakage_weight == weight
+        u = textbook(TRANSMON, search_on_levels(job).drive, 0.25 * NS)
+        leaked.append(np.sum(np.abs(u[2, :2]) ** 2) / 2)
+        rotated.append(pedersen(u[:2, :2], rotation.matrix(job.target.quaternion)) - leaked[-1])
+    assert leaked[0] > 100 * leaked[1] > 0
+    assert 0 < 2 * rotated[0] < rotated[1]
+
+
+def test_leakage_weight_of_one_needs_no_ladder():
+    text = """
+        [drive]
+        rabi_max_MHz = 25.0
+        sample_rate_MSps = 1000.0
+        [target]
+        gate = "s"
+        [pulse]
+        duration_ns = 40.0
+        slice_ns = 1.0
+        """
+    assert parse_job(text).leakage_weight == 1
+    assert parse_job(text + "[search]\nleakage_weight = 1.0").leakage_weight == 1
 
 
 def test_bad_ladders_give_one_line():

@@ -81,6 +81,7 @@ class Job:
     seed: int
     minimize: str
     stop_infidelity: float | None
+    leakage_weight: float
     others: tuple[Group, ...]
     shape: Shape
     line: LineFacts
@@ -247,6 +248,7 @@ def _in_si(
         seed=search.seed,
         minimize=search.minimize,
         stop_infidelity=stop,
+        leakage_weight=search.leakage_weight,
         others=others,
         shape=Shape(
             shape.smoothness,

@@ -230,6 +230,11 @@ class Search(Section):
     stop_infidelity: Annotated[float, Field(gt=0, lt=1)] | None = Field(
         None, description="the search stops here; falling short of it is exit code 3"
     )
+    leakage_weight: Positive = Field(
+        1.0,
+        description="of population lost to the levels above, against a wrong rotation; seepage "
+        "is weighted with it: 2 leakage / (levels - 2) without decay",
+    )
 
 
 class JobFile(Section):
@@ -291,6 +296,11 @@ class JobFile(Section):
                 )
         if self.qubit.anharmonicity_MHz is not None:
             self._require_what_a_ladder_can()
+        elif self.search.leakage_weight != 1:
+            raise ValueError(
+                "search.leakage_weight: expected qubit.anharmonicity_MHz with it, since nothing "
+                f"leaks from two levels; got {self.search.leakage_weight:g} and no anharmonicity"
+            )
         if self.line.kind == "touchstone" and self.drive.carrier_GHz is None:
             raise ValueError("drive.carrier_GHz: expected a value with a touchstone line, got none")
         if abs(self.drive.intermediate_MHz) >= self.drive.sample_rate_MSps / 2:

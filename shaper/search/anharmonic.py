@@ -51,7 +51,8 @@ def search_on_levels(
         starts=min(job.starts, _STARTS),
         iterations=job.iterations,
         rounds=_ROUNDS if job.has_tolerance and worst_counts(job) else 0,
-        stop=_BELOW * goal,
+        stop=_BELOW * goal * min(1.0, job.leakage_weight),  # of the weighted cost
+        leakage_weight=job.leakage_weight,
         seed=job.seed,
         kernel=None if taps is None else taps.kernel,
         between=between,
