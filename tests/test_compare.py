@@ -9,6 +9,7 @@ import pytest
 import reference
 
 from shaper.cli import main
+from shaper.cli.compare import text as shown_text
 from shaper.composite import place, sandwich
 from shaper.composite.geodesic import stepped_on_grid
 from shaper.evidence.score import score
@@ -308,9 +309,29 @@ def test_a_qubit_with_more_levels_is_judged_on_them(waveform):
     rows = {row.name: row for row in comparison.rows}
     smooth, hard = rows["cosine-half-derivative"], rows["two-pulse-reversed-Knill"]
     assert smooth.levels.leakage < 1e-4 < 1e-2 < hard.levels.leakage
+    assert hard.levels.seepage == pytest.approx(2 * hard.levels.leakage)
     assert smooth.levels.nominal < 1e-4 < smooth.nominal  # two levels alone would misjudge it
     for row in comparison.rows:
         assert row.levels.worst >= row.levels.nominal >= 2 / 3 * row.levels.leakage
         assert row.total == row.levels.worst + row.coherence
     assert comparison.verdict.winner.total == min(row.total for row in comparison.rows)
     assert "on three levels" in as_json(comparison)["verdict"]["sentence"]
+    for row, plain in zip(comparison.rows, as_json(comparison)["pulses"], strict=True):
+        assert plain["seepage"] == row.levels.seepage
+    assert "seepage, what returns from outside, then is twice as much." in words_of(comparison)
+
+
+def words_of(comparison) -> str:
+    """The text for people on one line."""
+    return " ".join(shown_text(comparison).split())
+
+
+@pytest.mark.parametrize(("levels", "ratio"), [(4, "as much"), (5, "2/3 as much")])
+def test_as_many_levels_as_the_job_says(waveform, levels, ratio):
+    text = JOB.replace("[qubit]", f"[qubit]\nanharmonicity_MHz = -210.0\nlevels = {levels}")
+    comparison = compare(dataclasses.replace(waveform, job_text=text))
+    for row in comparison.rows:
+        assert row.levels.seepage == pytest.approx(2 / (levels - 2) * row.levels.leakage)
+    assert f"on {['four', 'five'][levels - 4]} levels" in words_of(comparison)
+    assert f" {levels} levels worst leakage" in words_of(comparison)
+    assert f"seepage, what returns from outside, then is {ratio}." in words_of(comparison)

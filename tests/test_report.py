@@ -187,8 +187,8 @@ def test_the_stored_budget_is_drawn_and_the_second_opinion_told(without_pictures
     assert "verified</dt><dd>not yet" in make_report(case)
     claims = (Claim("codes, worst", 1e-3, 2e-3, False),)
     found = {
-        "shaped": Verification((), Budget({"line": 1e-5, "decay": 2e-4}, 3e-4, 0.0, {})),
-        "bb1": Verification(claims, Budget({"line": 3e-5, "leakage": 1e-6}, 5e-5, 0.0, {})),
+        "shaped": Verification((), Budget({"line": 1e-5, "decay": 2e-4}, 3e-4, 0.0, None, {})),
+        "bb1": Verification(claims, Budget({"line": 3e-5, "leakage": 1e-6}, 5e-5, 0.0, 0.0, {})),
     }
     checked = with_evidence(case, found)
     table = budget_table(checked)

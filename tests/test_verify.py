@@ -5,11 +5,13 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from scipy.integrate import solve_ivp
 from scipy.linalg import expm
 from scipy.optimize import least_squares
 
 from shaper import rotation
 from shaper.cli import main
+from shaper.cli.verify import text
 from shaper.drive.line import filtered, first_order, taps
 from shaper.drive.mixer import Calibration
 from shaper.drive.path import Path as BenchPath
@@ -23,7 +25,7 @@ from shaper.physics.propagate import propagate
 from shaper.pulse import Score, Waveform, make_pulse
 from shaper.store import load_waveform, save_waveform
 from shaper.target import Target, infidelity
-from shaper.workflow.verify import check_claims, effects_of, verify, with_evidence
+from shaper.workflow.verify import as_json, check_claims, effects_of, verify, with_evidence
 
 MHZ, NS, US = 2e6 * np.pi, 1e-9, 1e-6
 CLOSE = 1e-12
@@ -145,6 +147,77 @@ def test_second_opinion_agrees_on_decay(rng):
     )
 
 
+@pytest.mark.parametrize("levels", [3, 4, 5])
+def test_seepage_without_decay_balances_leakage(rng, levels):
+    """What comes in is what went out: Wood and Gambetta 2018, for a unitary."""
+    drive = rng.normal(0, 200 * MHZ, (9, 2))
+    unitary = independent.gate(drive, np.full(9, NS), 0.0, MHZ, levels, -200 * MHZ)
+    operator = independent.superoperator(unitary)
+    leaked = independent.leakage(operator)
+    assert leaked > 1e-3
+    assert independent.seepage(operator) == pytest.approx(2 * leaked / (levels - 2), abs=CLOSE)
+    # and by its definition: the mean over all states outside, here those of a sphere
+    states = rng.normal(size=(20_000, levels - 2, 2)) @ [1, 1j]
+    states /= np.linalg.norm(states, axis=1)[:, None]
+    arrived = np.sum(np.abs(states @ unitary[:2, 2:].T) ** 2, axis=1)
+    error = np.std(arrived) / np.sqrt(len(states))
+    assert abs(independent.seepage(operator) - np.mean(arrived)) < 5 * error + CLOSE
+
+
+@pytest.mark.parametrize("t2", [15 * NS, None])
+def test_seepage_with_decay_is_the_master_equation(rng, t2):
+    """By SciPy's integrator on the density matrix; more than leakage would give."""
+    drive, durations = rng.normal(0, 60 * MHZ, (6, 2)), rng.uniform(1, 3, 6) * NS
+    t1, levels, anharmonicity = 20 * NS, 4, -200 * MHZ
+    operator = independent.open_gate(drive, durations, 0.02, 3 * MHZ, levels, anharmonicity, t1, t2)
+    n, lower = np.diag(np.arange(levels)), np.diag(np.sqrt(np.arange(1, levels)), 1)
+    dephasing = 0.0 if t2 is None else 1 / t2 - 0.5 / t1
+
+    def slope(rho, h):
+        found = -1j * (h @ rho - rho @ h)
+        for rate, jump in ((1 / t1, lower), (2 * dephasing, n)):
+            square = jump.T @ jump
+            found = found + rate * (jump @ rho @ jump.T - (square @ rho + rho @ square) / 2)
+        return found
+
+    returned = []
+    for level in (2, 3):
+        rho = np.zeros((levels, levels), dtype=complex)
+        rho[level, level] = 1
+        for (x, y), duration in zip(1.02 * drive, durations, strict=True):
+            h = (x - 1j * y) / 2 * lower + (x + 1j * y) / 2 * lower.T
+            h = h + np.diag(3 * MHZ * (0.5 - np.diag(n))) + anharmonicity * n @ (n - np.eye(4)) / 2
+            rho = solve_ivp(
+                lambda _, y, h=h: slope(y.reshape(levels, levels), h).ravel(),
+                (0, duration),
+                rho.ravel(),
+                method="DOP853",
+                rtol=1e-11,
+                atol=1e-12,
+            ).y[:, -1]
+            rho = rho.reshape(levels, levels)
+        returned.append(np.trace(rho[:2, :2]).real)
+    assert independent.seepage(operator) == pytest.approx(np.mean(returned), abs=1e-9)
+    assert independent.seepage(operator) > 1.5 * independent.leakage(operator)
+
+
+def test_seepage_of_idling_is_the_decay_of_the_levels_outside():
+    """By hand: the third level falls at 2/T1 and is on the qubit at once; the fourth falls first
+    to the third at 3/T1, and dephasing moves no population.
+    """
+    t1, time = 60 * US, 25 * US
+    still, once = np.zeros((1, 2)), np.array([time])
+    third = 1 - np.exp(-2 * time / t1)
+    operator = independent.open_gate(still, once, 0.0, 0.0, 3, -0.2 * MHZ, t1, 30 * US)
+    assert independent.seepage(operator) == pytest.approx(third, abs=CLOSE)
+    assert independent.leakage(operator) == pytest.approx(0, abs=CLOSE)
+    # from the fourth: p3 = e^-3s, p2' = 3 p3 - 2 p2
+    s = time / t1
+    fourth = 1 - np.exp(-3 * s) - 3 * (np.exp(-2 * s) - np.exp(-3 * s))
+    operator = independent.open_gate(still, once, 0.0, 0.0, 4, -0.2 * MHZ, t1, 30 * US)
+    assert independent.seepage(operator) == pytest.approx((third + fourth) / 2, abs=CLOSE)
+
+
 def test_integrator_follows_the_line(rng):
     """The continuous waveform and its cell means meet, as the square of the cell."""
     samples, line = rng.normal(0, 10 * MHZ, (12, 2)), first_order(80e6)
@@ -201,6 +274,11 @@ def test_leakage_entry_and_levels(pulse, job):
     assert budget.alone["leakage"] == pytest.approx(alone, rel=0.1)
     assert budget.dominating == "leakage"
     assert budget.leakage > 0
+    assert budget.seepage == pytest.approx(2 * budget.leakage, abs=CLOSE)  # nothing decays
+    decays = error_budget(pulse, job.target, Effects(anharmonicity=-210 * MHZ, t1=6 * US))
+    fell = 2 * pulse.duration / (6 * US)  # from the third level, to first order
+    assert decays.seepage - 2 * decays.leakage == pytest.approx(fell, rel=0.3)
+    assert error_budget(pulse, job.target, Effects()).seepage is None
     four = error_budget(pulse, job.target, Effects(anharmonicity=-210 * MHZ, levels=4))
     assert four.alone["leakage"] == pytest.approx(budget.alone["leakage"], rel=0.2)
 
@@ -353,12 +431,26 @@ def test_command(tmp_path, waveform, capsys):
     assert "evidence stored" in printed.err
     evidence = load_waveform(path).evidence
     assert evidence["budget_together"].values[0] == result["together"]
+    assert evidence["budget_leakage"].values[0] == result["leakage"]
+    assert evidence["budget_seepage"].values[0] == result["seepage"] > 2 * result["leakage"]
     assert evidence["verified"].values[0] == 1
     assert main(["verify", str(path), "--keep-file", "--figure", str(tmp_path / "b.svg")]) == 0
     printed = capsys.readouterr()
     assert "every claim holds" in printed.out
     assert "dominates" in printed.out
+    (line,) = [line for line in printed.out.splitlines() if line.startswith("(seepage")]
+    assert line.split() == ["(seepage,", "not", "in", "it)", f"{result['seepage']:.2e}"]
+    assert "T1 brings some back" in printed.out
     assert (tmp_path / "b.svg").stat().st_size > 1000
+
+
+def test_two_levels_have_no_seepage(waveform):
+    """None, not a zero that nobody computed; nan in the file."""
+    two = JOB.replace("anharmonicity_MHz = -210.0\n", "")
+    found = verify(type(waveform)(**{**waveform.__dict__, "job_text": two}))
+    assert as_json(found)["shaped"]["seepage"] is None
+    assert np.isnan(with_evidence(waveform, found).evidence["budget_seepage"].values[0])
+    assert "seepage" not in text(found).lower()
 
 
 def test_command_on_a_false_file(tmp_path, waveform, capsys):

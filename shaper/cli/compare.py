@@ -9,6 +9,8 @@ from pathlib import Path
 from shaper.cli.arguments import add_against, add_data
 
 _WIDTH = 100  # columns of running text
+# by levels: the balance that ``physics.leakage.seepage`` gives, in words
+_SEEPAGE = {3: "twice as much", 4: "as much", 5: "2/3 as much"}
 FRAME_UPDATE = {
     "enough": "the target as stated needs no pulse: shift the phase of all later pulses by the z "
     "angle instead. It takes no time and has no error.",
@@ -99,8 +101,10 @@ def text(comparison) -> str:
             "largest +- error with infidelity below that, the other error zero. Leading terms: of "
             "the infidelity in the amplitude error e and in f = detuning / W_max. "
             + (
-                "3 levels: infidelity without errors and worst on a three-level ladder, leakage "
-                "counted; the verdict goes by it, all other figures are those of two levels. "
+                f"{job.levels} levels: infidelity without errors and worst on a ladder of so many, "
+                "leakage counted; the verdict goes by it, all other figures are those of two "
+                "levels. Leakage is that without decay; seepage, what returns from outside, then "
+                f"is {_SEEPAGE[job.levels]}. "
                 if job.anharmonicity
                 else ""
             )
@@ -197,12 +201,12 @@ def _robustness_table(comparison) -> str:
     from shaper.cli.table import aligned, plain, small
     from shaper.readable import rate_unit
 
-    rows = comparison.rows
+    job, rows = comparison.job, comparison.rows
     rate, hertz = rate_unit(max(row.detuning_windows[-1] for row in rows))
     header = ["pulse", "on paper", "e < 1e-4", "e < 1e-3", f"f < 1e-4 {rate}", f"f < 1e-3 {rate}"]
     header += ["leading in e", "leading in f"]
     laddered = rows[0].levels is not None
-    header += ["3 levels", "worst", "leakage"] * laddered + ["decay", "total"]
+    header += [f"{job.levels} levels", "worst", "leakage"] * laddered + ["decay", "total"]
 
     def term(found, letter: str) -> str:
         return f"{found.coefficient:.2g} {letter}^{found.order}" if found.order else "0"

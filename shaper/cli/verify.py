@@ -9,6 +9,11 @@ from shaper.cli.arguments import add_data
 
 _WIDTH = 100  # columns of running text
 NOT_CONFIRMED = 1
+SEEPAGE = (
+    "Leakage: population that the pulse leaves outside the qubit, mean over the qubit's states. "
+    "Seepage: population that it brings back, mean over the levels outside; T1 brings some back "
+    "by itself."
+)
 
 
 def add(commands):
@@ -103,6 +108,8 @@ def text(found) -> str:
         rows = [[source, small(value)] for source, value in budget.alone.items()]
         rows += [["sum", small(budget.total)], ["all together", small(budget.together)]]
         rows += [["(of it leakage)", small(budget.leakage)]]
+        exchanged = budget.seepage is not None
+        rows += [["(seepage, not in it)", small(budget.seepage)]] * exchanged
         blocks += [
             f"pulse      {name}: {'every claim holds' if result.holds else 'NOT CONFIRMED'}",
             "",
@@ -112,6 +119,7 @@ def text(found) -> str:
             "",
             fill(budget.note[0].upper() + budget.note[1:]),
             fill(budget.advice[0].upper() + budget.advice[1:]),
+            *[fill(SEEPAGE)] * exchanged,
             "",
         ]
     return "\n".join(blocks).rstrip()

@@ -103,12 +103,16 @@ class Budget:
         alone: source to infidelity; only the sources that were asked for.
         together: infidelity of the full simulation, at the worst point of the tolerance box.
         leakage: population outside in the full simulation.
+        seepage: population that would return from outside in the full simulation, decay included:
+            no part of the infidelity, but of what a pulse before this one has leaked. None on two
+            levels.
         crossed: (source, source) to what the pair adds to the sum of its entries.
     """
 
     alone: dict[str, float]
     together: float
     leakage: float
+    seepage: float | None
     crossed: dict[tuple[str, str], float]
 
     @property
@@ -244,7 +248,7 @@ class _Bench:
         worst = (0.0, 0.0)
         if effects.amplitude_tolerance or effects.detuning_tolerance:
             alone["tolerance"], vectors["tolerance"], worst = self.tolerance()
-        together, outside = self.full(worst, alone.get("colored noise", 0.0))
+        together, outside, returned = self.full(worst, alone.get("colored noise", 0.0))
         crossed = {}
         names = list(vectors)
         for k, a in enumerate(names):
@@ -252,7 +256,7 @@ class _Bench:
                 both = self.cost(vectors[a] + vectors[b])
                 crossed[a, b] = both - self.cost(vectors[a]) - self.cost(vectors[b])
         ordered = {name: alone[name] for name in SOURCES if name in alone}
-        return Budget(ordered, together, outside, crossed)
+        return Budget(ordered, together, outside, returned, crossed)
 
     def continuous(self):
         """Rotation error without a grid: the integrator, or a much finer grid."""
@@ -349,9 +353,10 @@ class _Bench:
         shifts = [self.cost(v - still) for v in moved]
         return max(shifts), moved[worst] - still, points[worst]
 
-    def full(self, point, colored) -> tuple[float, float]:
+    def full(self, point, colored) -> tuple[float, float, float | None]:
         """Everything at once: ladder, decay and path from the codes, at the worst point.
 
+        Infidelity, leakage and, where there is a level outside, seepage.
         Slow noise by quadrature; the rotating-wave error as a rotation afterwards; colored noise,
         known to first order only, is added.
         """
@@ -362,7 +367,7 @@ class _Bench:
         levels = 2 if effects.anharmonicity is None else effects.levels
         after = np.eye(levels, dtype=complex)
         after[:2, :2] = self.beyond_rotating_wave
-        lost = outside = 0.0
+        lost = outside = returned = 0.0
         for eps, delta, weight in self.nodes():
             operator = independent.open_gate(
                 drive,
@@ -377,7 +382,9 @@ class _Bench:
             operator = independent.superoperator(after) @ operator
             lost += weight * independent.infidelity(operator, self.target)
             outside += weight * independent.leakage(operator)
-        return float(lost + colored), float(outside)
+            if levels > 2:
+                returned += weight * independent.seepage(operator)
+        return float(lost + colored), float(outside), float(returned) if levels > 2 else None
 
 
 def _sigmas(effects: Effects) -> tuple[float, float]:

@@ -206,6 +206,22 @@ def leakage(operator: np.ndarray) -> float:
     return float(np.mean(outside))
 
 
+def seepage(operator: np.ndarray) -> float:
+    """Population on the qubit after the gate, mean over the states that began outside it.
+
+    That mean is one over the basis states outside, since their even mixture is that of all states
+    there. Relaxation brings population back too: with it this is more than leakage would give.
+
+    Args:
+        operator: [level^2, level^2] complex, three levels at least: all columns count.
+    Source:
+        C. J. Wood, J. M. Gambetta, Phys. Rev. A 97, 032306 (2018), section II.
+    """
+    levels = round(np.sqrt(len(operator)))
+    returned = [np.sum(np.diag(_evolved(operator, state))[:2].real) for state in np.eye(levels)[2:]]
+    return float(np.mean(returned))
+
+
 def rotation_error(unitary: np.ndarray, target: Target) -> np.ndarray:
     """[3]: vector part of what is left of the rotation on the qubit: half the angle, small.
 
@@ -224,8 +240,13 @@ def _matrix(quaternion: np.ndarray) -> np.ndarray:
 
 
 def _applied(operator: np.ndarray, levels: int, state: np.ndarray) -> np.ndarray:
-    full = np.concatenate([state, np.zeros(levels - 2)])
-    return (operator @ np.outer(full, full.conj()).ravel()).reshape(levels, levels)
+    return _evolved(operator, np.concatenate([state, np.zeros(levels - 2)]))
+
+
+def _evolved(operator: np.ndarray, state: np.ndarray) -> np.ndarray:
+    """Density matrix of what becomes of a pure state on all levels."""
+    levels = len(state)
+    return (operator @ np.outer(state, state.conj()).ravel()).reshape(levels, levels)
 
 
 def _overlap(operator, levels, state, wanted) -> float:

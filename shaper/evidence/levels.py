@@ -57,12 +57,13 @@ def level_infidelity(
     return leakage.infidelity(qubit_columns(drive, durations, job, eps, delta), job.target)
 
 
-def on_levels(drive: np.ndarray, durations: np.ndarray, job: Job) -> tuple[float, float]:
-    """Infidelity and leakage on the job's levels without errors."""
+def on_levels(drive: np.ndarray, durations: np.ndarray, job: Job) -> tuple[float, float, float]:
+    """Infidelity, leakage and seepage on the job's levels without errors and decay."""
     columns = qubit_columns(drive, durations, job, np.zeros(1), np.array([job.detuning]))
     return (
         float(leakage.infidelity(columns, job.target)[0]),
         float(leakage.leakage(columns)[0]),
+        float(leakage.seepage(columns)[0]),
     )
 
 
@@ -75,23 +76,25 @@ class OnLevels:
         mean: infidelity over the tolerance box.
         worst: largest infidelity over the tolerance box, on a coarse grid.
         leakage: population left outside the qubit, without errors.
+        seepage: population that returns to it from outside, without errors and decay.
     """
 
     nominal: float
     mean: float
     worst: float
     leakage: float
+    seepage: float
 
 
 def box_on_levels(drive: np.ndarray, durations: np.ndarray, job: Job) -> OnLevels:
     """The largest of each figure over the job's qubits; all have the job's anharmonicity."""
     found = []
     for qubit in map(job.for_group, job.groups):
-        nominal, leaked = on_levels(drive, durations, qubit)
+        nominal, *exchanged = on_levels(drive, durations, qubit)
         mean = worst = nominal
         if qubit.has_tolerance:
             grid = dense_grid(qubit, (_POINTS, _POINTS), _DENSITY, float(np.sum(durations)))
             over_box = level_infidelity(drive, durations, qubit, grid.eps, grid.delta)
             mean, worst = float(grid.weight @ over_box), max(nominal, float(np.max(over_box)))
-        found.append((nominal, mean, worst, leaked))
+        found.append((nominal, mean, worst, *exchanged))
     return OnLevels(*(max(column) for column in zip(*found, strict=True)))

@@ -273,7 +273,7 @@ def _figures(row: Row, job: Job) -> str:
         worst = max(row.groups, key=lambda group: group.worst)
         said += f" ({worst.name} is worst)" if row.levels is None else ""
     if row.levels is not None:
-        said += " on three levels"
+        said += f" on {('three', 'four', 'five')[job.levels - 3]} levels"
     if row.coherence is not None:
         said = f"{row.total:.2e} = {said} + {row.coherence:.2e} decay"
     return f"{said} in {time(row.duration, 5)}"

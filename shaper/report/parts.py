@@ -21,6 +21,7 @@ COLUMNS = (
     ("infidelity_on_three_levels", "infidelity, nominal, on all levels", ".2e"),
     ("infidelity_worst_on_three_levels", "worst over the box, on all levels", ".2e"),
     ("leakage", "leakage", ".2e"),
+    ("seepage", "seepage", ".2e"),
     ("infidelity_worst_with_decay", "worst with T1, T2", ".2e"),
 )
 

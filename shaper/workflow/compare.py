@@ -229,6 +229,7 @@ def _row_json(row: Row) -> dict:
         "infidelity_on_three_levels": row.levels and row.levels.nominal,
         "infidelity_worst_on_three_levels": row.levels and row.levels.worst,
         "leakage": row.levels and row.levels.leakage,
+        "seepage": row.levels and row.levels.seepage,
         "infidelity_of_idling": row.coherence,
         "infidelity_worst_with_decay": row.total,
         **windows,

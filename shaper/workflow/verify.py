@@ -206,6 +206,12 @@ def with_evidence(waveform: Waveform, found: dict[str, Verification]) -> Wavefor
         "budget_leakage": Table(
             np.array([b.leakage for b in budgets]), axis, "1", "population outside the qubit"
         ),
+        "budget_seepage": Table(
+            np.array([np.nan if b.seepage is None else b.seepage for b in budgets]),
+            axis,
+            "1",
+            "population that returns to the qubit from outside, decay included; nan on two levels",
+        ),
         "verified_worst": Table(
             np.array(worst), axis, "1", "worst infidelity of the codes, recomputed"
         ),
@@ -249,6 +255,7 @@ def as_json(found: dict[str, Verification]) -> dict:
             "sum": float(v.budget.total),
             "together": v.budget.together,
             "leakage": v.budget.leakage,
+            "seepage": v.budget.seepage,
             "adds_up": bool(v.budget.adds_up),
             "note": v.budget.note,
             "dominating": v.budget.dominating,
