@@ -5,7 +5,8 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from shaper.drive import mixer
+from shaper.drive import dac, mixer
+from shaper.drive.path import Path
 from shaper.errors import InputError, SafetyError
 from shaper.physics.propagate import propagate
 from shaper.target import Target, infidelity
@@ -118,6 +119,68 @@ def test_intermediate_frequency_keeps_gate_and_phase(rng):
     wanted = np.ones((1000, 2)) * [1.0, 0.0]
     spectrum = np.fft.fft(mixer.upconverted(wanted, 1e9, 120e6) @ [1, 1j])
     assert np.argmax(np.abs(spectrum)) == 120  # above the local oscillator
+
+
+@given(
+    st.floats(-0.49, 0.49),
+    st.integers(0, 100_000),
+    st.floats(-3, 3),
+    st.integers(1, 16),
+    st.integers(0, 2**32 - 1),
+)
+def test_mean_over_each_sample_is_the_wanted_drive(share, first, phase, cells, seed):
+    """Below half the sample rate, wherever the pulse begins, the hold takes nothing away."""
+    drive = np.random.default_rng(seed).normal(0, 1, (9, 2))
+    path = Path(intermediate_frequency=share * 1e9, phase=phase, first=first)
+    back, cell = path.at_qubit(path.to_play(drive, 1e9), 1e9, cells)
+    assert cell * cells == pytest.approx(NS)
+    # the turn of 100 000 samples is known to some 1e-10 of a turn
+    assert back.reshape(9, cells, 2).mean(1) == pytest.approx(drive, abs=1e-9)
+
+
+@given(
+    st.sampled_from(["circle", "box"]),
+    st.floats(-0.49, 0.49),
+    st.floats(0.8, 1.25),
+    st.floats(-0.2, 0.2),
+    st.floats(-0.1, 0.1),
+    st.integers(0, 2**32 - 1),
+)
+def test_share_of_the_bound_is_kept_by_what_is_played(bound, share, gain, phase, offset, seed):
+    """A drive at its share of the bound keeps the bound, and somewhere nearly reaches it."""
+    rng = np.random.default_rng(seed)
+    faulty = mixer.Calibration(gain=gain, phase=phase, offset_i=offset, offset_q=-offset / 2)
+    path = Path(calibration=faulty, intermediate_frequency=share * 1e9)
+    angle = rng.uniform(0, 2 * np.pi, 200)
+    drive = np.stack([np.cos(angle), np.sin(angle)], -1)
+    if bound == "box":
+        drive = np.concatenate([drive / np.max(np.abs(drive), 1)[:, None], np.sign(drive)])
+    room = path.share(1e9, 1.0, bound)
+    played = path.to_play(room * drive, 1e9)
+    mixer.require_headroom(played, 1.0, bound)
+    codes = dac.encode(played, 1.0, 12, bound).astype(int)
+    reach = np.hypot(*codes.T) if bound == "circle" else np.max(np.abs(codes), axis=1)
+    assert np.max(reach) <= dac.largest_code(12)
+    assert np.max(reach) > 0.7 * dac.largest_code(12)
+
+
+@pytest.mark.parametrize("skew", [0.0, 0.13 * NS, -0.4 * NS])
+def test_a_late_arm_on_an_intermediate_frequency(rng, skew):
+    """Cell means of the held, late, mixed and turned back waveform, against quadrature of it."""
+    faulty = mixer.Calibration(1.05, 0.06, 0.02, -0.03, skew)
+    drive = rng.normal(0, 1, (5, 2))
+    found = mixer.arrived_at_carrier(drive, faulty, 1e9, 4, 170e6, first=7, phase=0.4)
+    t = (np.arange(5 * 4 * 5000) + 0.5) / 20_000 * NS  # midpoints
+    late = np.floor((t - skew) / NS).astype(int)
+    inside = (late >= 0) & (late < 5)
+    i = drive[np.floor(t / NS).astype(int), 0] + 0.02
+    q = np.where(inside, drive[np.clip(late, 0, 4), 1], 0) - 0.03
+    carrier = 2 * np.pi * 170e6 * (t + 7 * NS) + 0.4
+    mixed = i + 1.05 * q * 1j * np.exp(1j * 0.06)
+    means = (mixed * np.exp(-1j * carrier)).reshape(20, 5000).mean(1)
+    assert found == pytest.approx(np.stack([means.real, means.imag], -1), abs=1e-6)
+    still = mixer.arrived_at_carrier(drive, faulty, 1e9, 4, 0.0)
+    assert still == pytest.approx(mixer.arrived(drive, faulty, 1e9, 4), abs=EXACT)
 
 
 def test_bad_calibrations_give_one_line():

@@ -55,6 +55,20 @@ def recomputed(path, pulse="shaped"):
 # ---- the straight road
 
 
+def test_a_pulse_at_the_bound_fits_through_the_mixer(run, tmp_path):
+    """The search leaves what hold and correction need, the file says what the mixer makes of it."""
+    mixer = "[mixer]\ngain = 1.03\nphase_deg = 2.0\nskew_ns = 0.1\n"
+    text = job_text(1.1 * Z90_LIMIT) + mixer
+    text = text.replace("[target]", "intermediate_MHz = 125.0\n[target]", 1)
+    code, out, err = run(text)
+    assert code == DONE, err
+    waveform = shaper.load_waveform(tmp_path / "job.h5")
+    pulse = waveform.pulses["shaped"]
+    reach = np.hypot(*pulse.codes.T.astype(float)) / (2 ** (pulse.bits - 1) - 1)
+    assert 0.9 < np.max(reach) <= 1
+    assert waveform.scores["shaped"].nominal < GOAL
+
+
 def test_a_nominal_job(run, tmp_path):
     code, out, err = run(job_text(1.001 * Z90_LIMIT))
     assert code == DONE

@@ -25,6 +25,7 @@ from shaper.physics.propagate import propagate
 from shaper.pulse import Score, Waveform, make_pulse
 from shaper.store import load_waveform, save_waveform
 from shaper.target import Target, infidelity
+from shaper.wiring import path_of, play
 from shaper.workflow.verify import as_json, check_claims, effects_of, verify, with_evidence
 
 MHZ, NS, US = 2e6 * np.pi, 1e-9, 1e-6
@@ -381,6 +382,44 @@ def test_intermediate_frequency_has_its_own_entry(pulse, job):
     assert budget.alone["search"] < CLOSE
     assert 1e-8 < budget.alone["mixer"] < 1e-3
     assert budget.dominating == "mixer"
+
+
+def test_a_pulse_bent_for_its_mixer_has_no_mixer_entry():
+    """What was met on the way is the search's to answer for; the same pulse as it was shows it."""
+    text = JOB.replace("[target]", "intermediate_MHz = 100.0\n[target]", 1)
+    job = parse_job(text + "[mixer]\ngain = 1.03\nskew_ns = 0.1\n")
+    t = (np.arange(60) + 0.5) / 60
+    drive = 15 * MHZ * np.stack([np.sin(np.pi * t), 0.5 * np.sin(2 * np.pi * t)], -1)
+    target, effects = gate_of(drive), Effects(path=path_of(job), cells=16)
+    plain, bent = (
+        play(job, drive, np.ones(60, int), "optimized", polished=polished)
+        for polished in (False, True)
+    )
+    as_it_was = error_budget(plain, target, effects)
+    assert as_it_was.dominating == "mixer"
+    assert as_it_was.alone["mixer"] > 1e-6
+    budget = error_budget(bent, target, effects)
+    assert "mixer" not in budget.alone
+    assert budget.alone["search"] < CLOSE
+    assert budget.alone["grid"] < 1e-9  # followed by an integrator, without cells
+    assert budget.dominating == "quantization"
+    assert budget.together < as_it_was.alone["mixer"]
+
+
+@pytest.mark.parametrize("skew", [0.0, 0.3, -1.4])
+def test_integrator_follows_the_mixer(rng, skew):
+    """Held samples through late arms and carrier, and their cell means, meet as they shrink."""
+    faults = Calibration(1.04, 0.05, 0.2 * MHZ, -0.1 * MHZ, skew * NS)
+    path = BenchPath(faults, 130e6, phase=0.3, first=5)
+    samples = rng.normal(0, 10 * MHZ, (12, 2))
+    exact = independent.integrated_mixer(path, samples, 1e9, 0.02, MHZ)
+    gaps = []
+    for cells in (10, 20):  # the skew on their edges
+        drive, cell = path.at_qubit(samples, 1e9, cells)
+        unitary = independent.gate(drive, np.full(len(drive), cell), 0.02, MHZ)
+        gaps.append(np.max(np.abs(exact - unitary)))
+    assert gaps[1] < 1e-4
+    assert gaps[0] / gaps[1] == pytest.approx(4, abs=0.2)
 
 
 def gate_of(drive):

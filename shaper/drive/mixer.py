@@ -174,6 +174,61 @@ def upconverted(
     return np.stack([z.real, z.imag], axis=-1)
 
 
+def arrived_at_carrier(
+    drive: np.ndarray,
+    calibration: Calibration,
+    sample_rate: float,
+    cells: int,
+    frequency: float,
+    *,
+    first: int = 0,
+    phase: float = 0.0,
+) -> np.ndarray:
+    """``arrived`` on an intermediate frequency, seen from the carrier, as exact cell means.
+
+    Each arm is turned back while it is held: the late one changes within a cell, where a product
+    of means would not be the mean of the product.
+
+    Args:
+        drive: [sample, 2] rad/s, played.
+        cells: per sample.
+        frequency, phase, first: as of ``upconverted``.
+    Returns:
+        [sample * cells, 2] rad/s.
+    """
+    played = np.asarray(drive, dtype=float) + calibration.offset
+    shift = calibration.skew * sample_rate
+    turn = 2 * np.pi * frequency / sample_rate
+    start = np.exp(-1j * (turn * first + phase))
+    arms = [
+        _turned_means(values, late, leak, turn, cells)
+        for values, late, leak in zip(played.T, (0.0, shift), calibration.offset, strict=True)
+    ]
+    z = start * (np.array([1, 1j]) @ calibration.matrix @ np.stack(arms))
+    return np.stack([z.real, z.imag], axis=-1)
+
+
+def _turned_means(values, late, outside, turn, cells) -> np.ndarray:
+    """[sample * cells] complex: cell means of ``held(t - late) e^(-i turn t)``, t in samples."""
+    count = len(values)
+    pad = 1 + abs(late)
+    edges = np.concatenate([[-pad], np.arange(count + 1) + late, [count + pad + abs(late)]])
+    values = np.concatenate([[outside], values, [outside]])
+
+    def area(begin, end):  # of the turning one
+        return (
+            (end - begin)
+            * np.sinc(turn * (end - begin) / (2 * np.pi))
+            * np.exp(-0.5j * turn * (begin + end))
+        )
+
+    before = np.concatenate([[0], np.cumsum(values * area(edges[:-1], edges[1:]))])
+    at = np.arange(count * cells + 1) / cells
+    piece = np.searchsorted(edges, at, side="right") - 1
+    total = before[piece] + values[piece] * area(edges[piece], at)
+    return np.diff(total) * cells
+
+
 def at_carrier(
     drive: np.ndarray,
     rate: float,

@@ -9,6 +9,9 @@ import numpy as np
 from shaper.drive import mixer
 from shaper.drive.line import Line, filtered, taps, whole
 
+_FEWEST_CELLS = 8  # per sample; enough for a line, which smooths
+_LARGEST_TURN = 0.04  # rad a cell at the intermediate frequency: its own sliver is then 1/250
+
 
 @dataclass(frozen=True)
 class Path:
@@ -33,6 +36,41 @@ class Path:
         """Whether the samples arrive as they are."""
         return self.line is None and not self.intermediate_frequency and self.calibration is None
 
+    @property
+    def ripples(self) -> bool:
+        """Whether something turns or moves within a sample while it is held."""
+        skewed = self.calibration is not None and self.calibration.skew != 0
+        return bool(self.intermediate_frequency) or skewed
+
+    def cells(self, sample_rate: float) -> int:
+        """Cells per sample, a power of two, in which the intermediate frequency turns by little."""
+        turn = 2 * np.pi * abs(self.intermediate_frequency) / sample_rate
+        return max(_FEWEST_CELLS, 1 << int(np.ceil(np.log2(max(turn / _LARGEST_TURN, 1)))))
+
+    def share(self, sample_rate: float, full_scale: float, bound: str) -> float:
+        """Of a bound on the drive: what may be asked for so that what is played keeps the bound.
+
+        Whatever the drive's direction when its sample comes. The overshoot where a skew moves one
+        arm by part of a sample is not in it: that depends on the drive.
+
+        Args:
+            full_scale: rad/s, radius of the circle or half side of the box.
+        Returns:
+            At most 1; not positive if the offset alone reaches the bound.
+        """
+        calibration = self.calibration or mixer.Calibration()
+        gain = np.linalg.inv(calibration.matrix) / np.sinc(
+            self.intermediate_frequency / sample_rate
+        )
+        offset = np.abs(calibration.offset) / full_scale
+        if bound == "circle":
+            left = (1 - np.hypot(*offset)) / np.linalg.norm(gain, 2)
+        elif self.intermediate_frequency:  # the corner of the box turns onto each axis
+            left = np.min((1 - offset) / (np.sqrt(2) * np.linalg.norm(gain, axis=1)))
+        else:
+            left = np.min((1 - offset) / np.sum(np.abs(gain), axis=1))
+        return min(1.0, float(left))
+
     def at_qubit(
         self, samples: np.ndarray, sample_rate: float, cells: int
     ) -> tuple[np.ndarray, float]:
@@ -46,15 +84,18 @@ class Path:
         """
         rate = sample_rate * cells
         calibration = self.calibration or mixer.Calibration()
-        drive = mixer.arrived(samples, calibration, sample_rate, cells)
         if self.intermediate_frequency:
-            drive = mixer.at_carrier(
-                drive,
-                rate,
+            drive = mixer.arrived_at_carrier(
+                samples,
+                calibration,
+                sample_rate,
+                cells,
                 self.intermediate_frequency,
-                first=self.first * cells,
+                first=self.first,
                 phase=self.phase,
             )
+        else:
+            drive = mixer.arrived(samples, calibration, sample_rate, cells)
         if self.line is not None:
             kernel = taps(self.line, 1 / rate, 1)
             drive = filtered(kernel.kernel, drive)

@@ -220,8 +220,10 @@ class _Bench:
         seen = self.vector(*self.wanted)
         vectors["search"] = seen
         if self.mixes:
-            vectors["search"] = self.vector(*self.unmixed)
-            vectors["mixer"] = seen - vectors["search"]
+            unmixed = self.vector(*self.unmixed)
+            bent = effects.path.ripples and self.cost(seen) <= self.cost(unmixed)
+            if not bent:  # else it was made for this mixer: what is left is the search's
+                vectors["search"], vectors["mixer"] = unmixed, seen - unmixed
         if effects.path.line is None or effects.correction == "model":
             vectors["quantization"] = arrived - seen
         elif effects.correction == "inverse":
@@ -272,6 +274,11 @@ class _Bench:
                 (len(self.samples) + after) / self.rate,
                 0.0,
                 self.effects.detuning,
+            )
+            return independent.rotation_error(unitary, self.target)
+        if path.line is None and path.ripples and not self.effects.on_ladder:
+            unitary = independent.integrated_mixer(
+                path, self.samples, self.rate, 0.0, self.effects.detuning
             )
             return independent.rotation_error(unitary, self.target)
         return self.vector(*self.through(path, self.samples, _FINER * self.effects.cells))

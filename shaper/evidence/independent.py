@@ -11,6 +11,8 @@ import numpy as np
 from scipy.integrate import solve_ivp
 
 from shaper.drive.line import Line
+from shaper.drive.mixer import Calibration
+from shaper.drive.path import Path
 from shaper.target import Target
 
 RESOLUTION = 1e-13  # infidelity; what sums of some thousand exponentials leave
@@ -165,6 +167,44 @@ def integrated(
     stops = stops[(stops >= begin) & (stops <= until)]
     for start, end in zip(stops[:-1], stops[1:], strict=True):
         u = solve_ivp(slope, (start, end), u, method="DOP853", rtol=1e-11, atol=1e-13).y[:, -1]
+    return u.reshape(2, 2)
+
+
+def integrated_mixer(
+    path: Path,
+    samples: np.ndarray,
+    sample_rate: float,
+    eps: float = 0.0,
+    delta: float = 0.0,
+) -> np.ndarray:
+    """[2, 2] complex: held samples through mixer and intermediate frequency, by DOP853; no cells.
+
+    The Q arm comes later by the skew; what leaves the mixer is turned back while it is held.
+
+    Args:
+        path: without a line.
+        samples: [sample, 2] rad/s.
+    """
+    faults = path.calibration or Calibration()
+    late, omega = faults.skew * sample_rate, 2 * np.pi * path.intermediate_frequency
+    quarter = 1j * faults.gain * np.exp(1j * faults.phase)
+    count = len(samples)
+    edges = np.concatenate([np.arange(count + 1), np.arange(count + 1) + late])
+    edges = np.unique(edges[(edges >= 0) & (edges <= count)])  # samples
+
+    def slope(t, y, z):
+        z = z * np.exp(-1j * (omega * (path.first + t) / sample_rate + path.phase))
+        h = np.array([[delta / 2, z.conjugate() / 2], [z / 2, -delta / 2]]) / sample_rate
+        return (-1j * h @ y.reshape(2, 2)).ravel()
+
+    u = np.eye(2, dtype=complex).ravel()
+    for start, end in zip(edges[:-1], edges[1:], strict=True):
+        i, q = int((start + end) / 2), int(np.floor((start + end) / 2 - late))
+        held = samples[q, 1] if 0 <= q < count else 0.0
+        z = samples[i, 0] + faults.offset_i + quarter * (held + faults.offset_q)
+        u = solve_ivp(
+            slope, (start, end), u, "DOP853", args=((1 + eps) * z,), rtol=1e-11, atol=1e-13
+        ).y[:, -1]
     return u.reshape(2, 2)
 
 

@@ -18,7 +18,7 @@ from shaper.search.anharmonic import search_on_levels
 from shaper.search.checkpoint import Checkpoint
 from shaper.search.duration import Tried, search_best, search_shortest
 from shaper.units import NS
-from shaper.wiring import play
+from shaper.wiring import for_search, play
 from shaper.workflow.assemble import assemble
 
 _LIBRARIES = ("jax", "optax", "numpy", "scipy", "h5py")
@@ -43,17 +43,18 @@ def optimize(
     """
     baseline = place(sandwich(job.target, job.bound), job)
     curve = {}
+    within = for_search(job)
     if job.open_duration:
         look = search_shortest if job.find_shortest else search_best
-        tried = look(job, progress, stop)
-        job, found = tried.job, tried.found
+        tried = look(within, progress, stop)
+        job, found = replace(tried.job, rabi_max=job.rabi_max), tried.found
         curve = _curve(tried)
         if stop is not None and stop():  # it may have converged, but not on the duration
             found = replace(found, status="interrupted")
     elif job.anharmonicity is not None:
-        found = search_on_levels(job, progress, stop)
+        found = search_on_levels(within, progress, stop)
     else:
-        found = descent.search(job, progress, stop, checkpoint=checkpoint)
+        found = descent.search(within, progress, stop, checkpoint=checkpoint)
     samples = np.full(job.slices, job.samples_per_slice)
     shaped = play(job, found.drive, samples, "optimized", polished=True)
     pulses = {"shaped": shaped, "sandwich": baseline}

@@ -139,10 +139,11 @@ def _cells(pulse: Pulse, effects: Effects) -> int:
     path = effects.path
     if path.straight:
         return 1
+    turning = path.cells(pulse.sample_rate)
     if path.line is None:
-        return _CELLS_WITHOUT_LINE
+        return max(_CELLS_WITHOUT_LINE, turning)
     floats = np.repeat(pulse.drive, pulse.samples, axis=0)
-    return max(_FEWEST_CELLS, cells_needed(path.line, floats, 1 / pulse.sample_rate))
+    return max(_FEWEST_CELLS, turning, cells_needed(path.line, floats, 1 / pulse.sample_rate))
 
 
 def check_claims(
@@ -342,7 +343,7 @@ def _figures(drive, durations, target, effects) -> tuple[float, float, float]:
 
 def _grid(path: BenchPath, infidelity: float) -> float:
     """What two grids of cells behind a path may differ by: their errors add to the pulse's own."""
-    return 0.0 if path.straight else float(GRID + 2 * np.sqrt(infidelity * GRID))
+    return 0.0 if path.straight else float(GRID + 2 * np.sqrt(max(infidelity, 0) * GRID))
 
 
 def _agree(claimed: float, found: float, relative: float, grid: float) -> bool:
