@@ -1,5 +1,7 @@
 """The ladder against matrix exponentials, central differences and published leakage tables."""
 
+from dataclasses import replace
+
 import jax
 import jax.numpy as jnp
 import numpy as np
@@ -11,9 +13,16 @@ from shaper.drive.line import filtered, first_order, taps
 from shaper.errors import InputError
 from shaper.job import parse_job
 from shaper.physics import leakage, two_level
-from shaper.physics.ladder import Ladder, derivative_corrected, plan, propagate_qubit
-from shaper.search.anharmonic import search_on_levels
-from shaper.search.ladder import search_ladder
+from shaper.physics.ladder import (
+    Ladder,
+    derivative_corrected,
+    errors_and_jacobian,
+    make_chain,
+    plan,
+    propagate_qubit,
+)
+from shaper.search.descent import search
+from shaper.search.duration import search_shortest
 from shaper.target import Target, infidelity
 
 jax.config.update("jax_enable_x64", True)
@@ -40,9 +49,8 @@ def columns(ladder, drive, duration, eps=(0.0,), delta=(0.0,)):
     """[grid, level, 2] complex from the engine; bounds rounded up, so that programs are shared."""
     reach = np.max(np.hypot(*np.asarray(drive).T)) * (1 + np.max(np.abs(eps)))
     steps = plan(ladder, duration, 2 ** np.ceil(np.log2(reach)), np.max(np.abs(delta)))
-    re, im = propagate_qubit(
-        ladder, steps, jnp.asarray(drive), duration, jnp.asarray(eps), jnp.asarray(delta)
-    )
+    chain = make_chain(ladder, steps, duration, np.asarray(delta))
+    re, im = propagate_qubit(chain, jnp.asarray(drive), jnp.asarray(eps))
     return np.asarray(re) + 1j * np.asarray(im)
 
 
@@ -79,13 +87,13 @@ def test_gradient_is_the_central_difference(rng, levels):
     ladder = Ladder(-210 * MHZ, levels)
     drive = rng.normal(0, 40 * MHZ, (12, 2))
     drive[0] = 0.0  # with the drive off, too
-    eps, delta = jnp.array([0.0, 0.05]), jnp.array([0.0, 2 * MHZ])
-    steps = plan(ladder, NS / 4, 150 * MHZ, 2 * MHZ)
+    eps, delta = jnp.array([0.0, 0.05]), np.array([0.0, 2 * MHZ])
+    chain = make_chain(ladder, plan(ladder, NS / 4, 150 * MHZ, 2 * MHZ), NS / 4, delta)
     weight_re, weight_im = rng.normal(size=(2, 2, levels, 2))
 
     @jax.jit
     def cost(d):
-        re, im = propagate_qubit(ladder, steps, d, NS / 4, eps, delta)
+        re, im = propagate_qubit(chain, d, eps)
         return jnp.sum(weight_re * re) ** 2 + jnp.sum(weight_im * im)
 
     ours = np.asarray(jax.grad(cost)(jnp.asarray(drive)))
@@ -100,15 +108,17 @@ def test_gradient_is_the_central_difference(rng, levels):
 
 def test_memory_does_not_grow_with_the_slices():
     """What the forward pass keeps for the backward pass is the same size for any length."""
-    steps = plan(TRANSMON, NS, 60 * MHZ)
-    eps = delta = jnp.zeros(7)
+    chain = make_chain(TRANSMON, plan(TRANSMON, NS, 60 * MHZ), NS, np.zeros(7))
+    eps = jnp.zeros(7)
 
     def kept(slices):
         def end(drive):
-            return propagate_qubit(TRANSMON, steps, drive, NS, eps, delta)
+            return propagate_qubit(chain, drive, eps)
 
         _, pull = jax.vjp(end, jnp.zeros((slices, 2)))
-        return sum(leaf.size for leaf in jax.tree.leaves(pull)) - 2 * slices  # less the drive
+        return (
+            sum(leaf.size for leaf in jax.tree.leaves(pull)) - 3 * slices
+        )  # less the drive, and which are there
 
     assert kept(400) == kept(40)
 
@@ -219,11 +229,31 @@ def test_seepage_balances_leakage(rng):
     assert leakage.leakage(u[:, :2]) > 1e-3
 
 
+def transmon_job(duration=10.0, slice_ns=0.5, more="", starts=6):
+    """Half a turn with at most 60 MHz on three levels."""
+    return parse_job(f"""
+        [qubit]
+        anharmonicity_MHz = -210.0
+        [drive]
+        rabi_max_MHz = 60.0
+        sample_rate_MSps = 4000.0
+        [target]
+        gate = "x"
+        angle_deg = 180.0
+        [pulse]
+        duration_ns = {duration}
+        slice_ns = {slice_ns}
+        {more}
+        [search]
+        starts = {starts}
+        stop_infidelity = 1e-13
+        """)
+
+
 def test_search_reaches_round_off_where_the_gaussian_cannot():
     """Half a turn in 10 ns with 60 MHz: below 1e-12, checked by matrix exponentials."""
-    found = search_ladder(
-        TRANSMON, HALF_TURN, 20, 0.5 * NS, 60 * MHZ, starts=6, iterations=80, stop=1e-20
-    )
+    found = search(transmon_job())
+    assert found.status == "converged"
     assert np.max(np.hypot(*found.drive.T)) <= 60 * MHZ * (1 + 1e-12)
     u = textbook(TRANSMON, found.drive, 0.5 * NS)
     assert pedersen(u[:2, :2], rotation.matrix(HALF_TURN.quaternion)) < 1e-12
@@ -235,23 +265,73 @@ def test_search_reaches_round_off_where_the_gaussian_cannot():
 
 def test_search_through_a_line():
     """On three levels and behind a 150 MHz line at once; checked by matrix exponentials."""
-    line = first_order(150e6)
-    kernel = taps(line, 0.5 * NS, 2).kernel
-    found = search_ladder(
-        TRANSMON,
-        HALF_TURN,
-        24,
-        0.5 * NS,
-        60 * MHZ,
-        starts=4,
-        iterations=60,
-        stop=1e-16,
-        kernel=kernel,
-    )
-    u = textbook(TRANSMON, filtered(kernel, found.drive), 0.25 * NS)
-    assert pedersen(u[:2, :2], rotation.matrix(HALF_TURN.quaternion)) < 1e-10
+    line = '[line]\nkind = "first_order"\nbandwidth_MHz = 150.0'
+    found = search(transmon_job(12.0, more=line))
+    kernel = taps(first_order(150e6), 0.5 * NS, 64).kernel
+    u = textbook(TRANSMON, filtered(kernel, found.drive), 0.5 / 64 * NS)
+    assert pedersen(u[:2, :2], rotation.matrix(HALF_TURN.quaternion)) < 1e-8  # of the cells
     u = textbook(TRANSMON, found.drive, 0.5 * NS)
     assert pedersen(u[:2, :2], rotation.matrix(HALF_TURN.quaternion)) > 1e-5
+
+
+def test_wishes_hold_on_a_ladder_too():
+    """Zero at both ends; smoother the more it counts; and a half turn without leakage."""
+    roughness = []
+    for weight in (1e-3, 10.0):
+        shape = f"[shape]\nrise_ns = 3.0\nsmoothness = {weight}"
+        found = search(transmon_job(14.0, more=shape, starts=3))
+        assert np.all(found.drive[[0, -1]] == 0)
+        u = textbook(TRANSMON, found.drive, 0.5 * NS)
+        assert pedersen(u[:2, :2], rotation.matrix(HALF_TURN.quaternion)) < 1e-9
+        roughness.append(np.sum(np.diff(found.drive, 2, axis=0) ** 2))
+    assert roughness[1] < 0.9 * roughness[0]
+
+
+def test_the_shortest_pulse_on_a_ladder_is_longer_than_on_two_levels():
+    """Two levels need pi/W = 8.33 ns; nine of the ten slices of 1 ns are enough for three."""
+    tried = search_shortest(transmon_job('"shortest"', 1.0))
+    assert tried.found.infidelity <= 1e-13
+    assert tried.job.slices >= 9
+    before = tried.infidelity[list(tried.slices).index(tried.job.slices) - 1]
+    assert before > 1e-13
+
+
+def test_box_on_a_ladder_is_what_matrix_exponentials_find(rng):
+    """The worst case of a robust search on three levels, leakage counted, point by point."""
+    tolerance = "[tolerance]\namplitude = 0.01\ndetuning_MHz = 1.0"
+    job = transmon_job(16.0, 1.0, more=tolerance, starts=2)
+    found = search(replace(job, iterations=20, stop_infidelity=None))
+    wanted = rotation.matrix(HALF_TURN.quaternion)
+    worst = 0.0
+    for e in (-1, 0, 1):
+        for d in (-1, 0, 1):
+            u = textbook(TRANSMON, found.drive, NS, 0.01 * e, MHZ * d)
+            worst = max(worst, pedersen(u[:2, :2], wanted))
+    assert worst <= found.infidelity * (1 + 1e-9)
+    assert found.infidelity < 1.5 * worst
+
+
+@pytest.mark.parametrize(("levels", "duration"), [(3, 0.1), (4, 0.6)])  # the long one is cut
+def test_errors_and_jacobian_are_those_of_the_chain(rng, levels, duration):
+    """Weighted at random, against the engine's columns and their adjoint; blocks and a rest."""
+    ladder, grid = Ladder(-5.0, levels), 19
+    drive, eps = rng.normal(size=(6, 2)), rng.normal(0, 0.05, grid)
+    delta, rows = rng.normal(0, 0.3, grid), rng.normal(size=(5, 4 * levels, grid))
+    chain = make_chain(ladder, plan(ladder, duration, 5.0, 1.5), duration, delta)
+    on = np.array([1, 1, 0, 1, 1, 0], dtype=bool)  # two slices are not there
+
+    weight = rng.normal(size=(5, grid))
+
+    def sum_of(drive):
+        ends = propagate_qubit(chain, drive, eps)
+        return jnp.einsum("rg,rig,gi->", weight, rows, jnp.stack(ends, -1).reshape(grid, -1))
+
+    errors, jacobian = map(np.asarray, errors_and_jacobian(chain, drive, eps, rows, on))
+    value, slope = jax.value_and_grad(sum_of)(drive[on])
+    assert np.sum(weight * errors) == pytest.approx(float(value), abs=100 * EXACT)
+    found = np.einsum("rg,scrg->sc", weight, jacobian)
+    assert found[on] == pytest.approx(np.asarray(slope), abs=100 * EXACT)
+    assert np.all(jacobian[~on] == 0)
 
 
 def test_leakage_weight_of_the_job_trades_rotation_for_leakage():
@@ -280,7 +360,7 @@ def test_leakage_weight_of_the_job_trades_rotation_for_leakage():
     for weight in (1.0, 100.0):
         job = parse_job(text.format(weight))
         assert job.leakage_weight == weight
-        u = textbook(TRANSMON, search_on_levels(job).drive, 0.25 * NS)
+        u = textbook(TRANSMON, search(job).drive, 0.25 * NS)
         leaked.append(np.sum(np.abs(u[2, :2]) ** 2) / 2)
         rotated.append(pedersen(u[:2, :2], rotation.matrix(job.target.quaternion)) - leaked[-1])
     assert leaked[0] > 100 * leaked[1] > 0

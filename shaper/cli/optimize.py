@@ -55,10 +55,10 @@ def run(args) -> int:
         raise InputError(f"{args.job}: --shortest needs search.stop_infidelity, got none")
     if args.shortest:
         job = replace(job, find_shortest=True, find_best=False)
-    if args.resume and (job.open_duration or job.anharmonicity is not None):
+    if args.resume and job.open_duration:
         raise InputError(
-            "--resume: expected a search with checkpoints; one for the duration or on a "
-            "ladder begins anew each time"
+            "--resume: expected a search with checkpoints; one for the duration begins anew "
+            "each time"
         )
     output = Path(args.output or Path(args.job).with_suffix(".h5").name)
     _require_writable("--output", output)

@@ -295,7 +295,11 @@ class JobFile(Section):
                     f"{self.pulse.duration_ns:g}, got {self.shape.rise_ns:g}"
                 )
         if self.qubit.anharmonicity_MHz is not None:
-            self._require_what_a_ladder_can()
+            if self.group:
+                raise ValueError(
+                    "group: expected a job without qubit.anharmonicity_MHz; several qubits on one "
+                    "line have two levels each"
+                )
         elif self.search.leakage_weight != 1:
             raise ValueError(
                 "search.leakage_weight: expected qubit.anharmonicity_MHz with it, since nothing "
@@ -316,21 +320,6 @@ class JobFile(Section):
                 "which errors, and how they weigh, is read from it"
             )
         return self
-
-    def _require_what_a_ladder_can(self):
-        """The search on a ladder knows one qubit, a fixed duration and no wishes."""
-        unknown = {
-            "group": bool(self.group),
-            "pulse.duration_ns": isinstance(self.pulse.duration_ns, str),
-            "search.minimize": self.search.minimize == "first_order",
-            "shape": self.shape != ShapeSection(),
-        }
-        for key, asked in unknown.items():
-            if asked:
-                raise ValueError(
-                    f"{key}: expected a job without qubit.anharmonicity_MHz; the search on a "
-                    "ladder cannot do this yet"
-                )
 
     def _require_goal(self):
         if self.pulse.duration_ns == "best":

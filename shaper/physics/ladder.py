@@ -4,32 +4,20 @@
 [(Wx - i Wy) |n-1><n| + h.c.]``. On the two lowest levels this is the two-level Hamiltonian, sign of
 ``delta`` included; ``alpha`` is the second transition minus the first.
 
-One slice of length dt has the half turn ``w = (Wx + i Wy)(1 + eps) dt/2``. A turn of the drive's
-phase is diagonal, so an element of the slice is
-
-    U[m, n] = g[m, n](s) w^(m-n),  m >= n,    U[n, m] = g[m, n](s) conj(w)^(m-n),    s = |w|^2
-
-with ``g`` entire in ``s``. Its power series has coefficients that depend on detuning and
-anharmonicity only: they are made once, before the chain, and the loop is left with short
-polynomials in ``s``.
-
-The chain carries the two columns that start in the qubit. Its adjoint stores nothing along the way:
-a change of a slice is ``dU = -i G U``, so the cotangent acts only through the Hermitian
-``H = (X - X^dag)/2i``, ``X = (end state)(cotangent)^dag``; going back through a slice is
-``Y = H U``, ``H <- U^dag Y``, and ``dJ = Re i tr(Y^dag dU)`` is read off on the way (derived here).
+How a chain of slices is computed and differentiated is in ``physics.ladder_chain``.
 """
 
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
-from functools import partial
+from dataclasses import dataclass, field
 
 import jax
 import jax.numpy as jnp
 import numpy as np
 
 from shaper.errors import InputError
+from shaper.physics.ladder_chain import coefficients, columns, columns_and_jacobian
 from shaper.physics.two_level import require_float64
 
 Array = jax.Array
@@ -109,251 +97,125 @@ def plan(
     return Steps(cuts, powers, terms)
 
 
-def _coefficients(ladder: Ladder, steps: Steps, duration: Array, delta: Array) -> tuple:
-    """Power series of every ``g[m, n]`` in ``s``: nested ``[m][n][term] -> (re, im)``, [grid]."""
-    d, terms = ladder.levels, steps.terms
-    level = jnp.stack(
-        [duration * (delta * (0.5 - n) + e) for n, e in enumerate(ladder.energies)]
-    )  # [level, grid]
-    root = jnp.sqrt(jnp.arange(1.0, d))[:, None, None]
-    # entry [n, m, term]: (-i H dt)^k / k! without its factor (-i)^k and its power of w or w*
-    power = jnp.zeros((d, d, terms, delta.shape[0])).at[jnp.arange(d), jnp.arange(d), 0].set(1.0)
-    row, column = jnp.arange(d - 1)[:, None], jnp.arange(d)[None, :]
-    up_overlaps = (row + 1 > column)[..., None, None]  # H[n, n+1] (w*) meets a power of w
-    down_overlaps = (row < column)[..., None, None]  # H[n+1, n] (w) meets a power of w*
+@jax.tree_util.register_dataclass
+@dataclass(frozen=True)
+class Chain:
+    """Equal slices, ready for the compiler: made by ``make_chain``.
 
-    def times_s(x):
-        return jnp.concatenate([jnp.zeros_like(x[:, :, :1]), x[:, :, :-1]], axis=2)
+    Attributes:
+        duration: [] s, of a part of a slice.
+        series: [element, term, 2, grid], of ``ladder_chain.coefficients``.
+        cuts: equal parts of a slice.
+    """
 
-    def step(carry, k):
-        power, re, im = carry
-        upper = root[..., None] * power[1:]
-        lower = root[..., None] * power[:-1]
-        moved = level[:, None, None, :] * power
-        moved = moved.at[:-1].add(jnp.where(up_overlaps, times_s(upper), upper))
-        moved = moved.at[1:].add(jnp.where(down_overlaps, times_s(lower), lower))
-        power = moved / k
-        turn = k % 4  # (-i)^k = 1, -i, -1, i
-        re = re + power * jnp.where(turn == 0, 1.0, jnp.where(turn == 2, -1.0, 0.0))
-        im = im + power * jnp.where(turn == 3, 1.0, jnp.where(turn == 1, -1.0, 0.0))
-        return (power, re, im), None
+    duration: Array
+    series: Array
+    cuts: int = field(metadata={"static": True})
 
-    start = (power, power, jnp.zeros_like(power))
-    (_, re, im), _ = jax.lax.scan(step, start, jnp.arange(1, steps.powers + 1))
-    return tuple(
-        tuple(tuple((re[m, n, j], im[m, n, j]) for j in range(terms)) for n in range(m + 1))
-        for m in range(d)
-    )
+    @property
+    def levels(self) -> int:
+        """Number of levels: they have ``n (n + 1) / 2`` elements."""
+        return (math.isqrt(8 * self.series.shape[0] + 1) - 1) // 2
 
 
-def _times(a: tuple, b: tuple) -> tuple:
-    """Product of two (re, im) pairs."""
-    return a[0] * b[0] - a[1] * b[1], a[0] * b[1] + a[1] * b[0]
+def make_chain(ladder: Ladder, steps: Steps, duration: float, delta: np.ndarray) -> Chain:
+    """What a chain of equal slices needs to know of the ladder.
+
+    Args:
+        steps: from ``plan`` for the same slices and bounds.
+        duration: s, of a slice.
+        delta: [grid] rad/s detuning.
+    """
+    part = duration / steps.cuts
+    level = [part * (np.asarray(delta) * (0.5 - n) + e) for n, e in enumerate(ladder.energies)]
+    series = coefficients(np.stack(level), steps.powers, steps.terms)
+    return Chain(np.asarray(part), series, steps.cuts)
 
 
-def _add(a: tuple, b: tuple) -> tuple:
-    return a[0] + b[0], a[1] + b[1]
-
-
-def _conj(a: tuple) -> tuple:
-    return a[0], -a[1]
-
-
-def _horner(series: tuple, s: Array) -> tuple:
-    re, im = series[-1]
-    for c_re, c_im in reversed(series[:-1]):
-        re, im = re * s + c_re, im * s + c_im
-    return re, im
-
-
-def _slope(series: tuple, s: Array) -> tuple:
-    """Derivative of ``_horner`` in s."""
-    if len(series) == 1:
-        return jnp.zeros_like(s), jnp.zeros_like(s)
-    return _horner(tuple((k * re, k * im) for k, (re, im) in enumerate(series) if k), s)
-
-
-def _powers(w: tuple, d: int) -> list:
-    """w^1 .. w^(d-1); index 0 is unused."""
-    powers = [None, w]
-    for _ in range(2, d):
-        powers.append(_times(powers[-1], w))
-    return powers
-
-
-def _slice(g: list, powers: list) -> list:
-    """The matrix of one slice from its ``g`` and the powers of ``w``: [row][column] of pairs."""
-    d = len(g)
-    u = [[None] * d for _ in range(d)]
-    for m in range(d):
-        u[m][m] = g[m][m]
-        for n in range(m):
-            u[m][n] = _times(g[m][n], powers[m - n])
-            u[n][m] = _times(g[m][n], _conj(powers[m - n]))
-    return u
-
-
-@partial(jax.custom_vjp, nondiff_argnums=(0, 1))
-def _columns(ladder: Ladder, steps: Steps, x: Array, y: Array, duration, scale, delta):
-    """Final qubit columns; x, y: [slice] rad/s; scale, delta: [grid] -> [level][column] pairs."""
-    series = _coefficients(ladder, steps, duration, delta)
-    d, half = ladder.levels, scale * (duration / 2)
-
-    def step(psi, drive):
-        w = drive[0] * half, drive[1] * half
-        s = w[0] * w[0] + w[1] * w[1]
-        g = [[_horner(c, s) for c in row] for row in series]
-        u = _slice(g, _powers(w, d))
-        new = []
-        for row in u:
-            pair = []
-            for column in range(2):
-                total = _times(row[0], psi[0][column])
-                for k in range(1, d):
-                    total = _add(total, _times(row[k], psi[k][column]))
-                pair.append(total)
-            new.append(tuple(pair))
-        return tuple(new), None
-
-    zero, one = jnp.zeros_like(scale), jnp.ones_like(scale)
-    start = tuple(
-        tuple((one if level == column else zero, zero) for column in range(2)) for level in range(d)
-    )
-    return jax.lax.scan(step, start, (x, y))[0]
-
-
-def _columns_forward(ladder, steps, x, y, duration, scale, delta):
-    end = _columns(ladder, steps, x, y, duration, scale, delta)
-    return end, (x, y, duration, scale, delta, end)
-
-
-def _columns_backward(ladder, steps, kept, cotangent):
-    x, y, duration, scale, delta, end = kept
-    series = _coefficients(ladder, steps, duration, delta)
-    d, half = ladder.levels, scale * (duration / 2)
-
-    def outer(m, n):
-        """X[m, n] = sum over columns of end[m] conj(cotangent[n])."""
-        return _add(*(_times(end[m][c], _conj(cotangent[n][c])) for c in range(2)))
-
-    def hermitian(m, n):
-        """((X - X^dag)/2i)[m, n]."""
-        a, b = outer(m, n), outer(n, m)
-        return 0.5 * (a[1] + b[1]), -0.5 * (a[0] - b[0])
-
-    # lower triangle, row by row; the diagonal is real
-    start = tuple(
-        tuple(hermitian(m, n) if n < m else hermitian(m, n)[0] for n in range(m + 1))
-        for m in range(d)
-    )
-
-    def element(h, m, n):
-        if m == n:
-            return h[m][m], None
-        return h[m][n] if n < m else _conj(h[n][m])
-
-    def matrix_times(h, u):
-        """Y = H U."""
-        rows = []
-        for m in range(d):
-            row = []
-            for n in range(d):
-                total = (h[m][m] * u[m][n][0], h[m][m] * u[m][n][1])
-                for k in range(d):
-                    if k != m:
-                        total = _add(total, _times(element(h, m, k), u[k][n]))
-                row.append(total)
-            rows.append(row)
-        return rows
-
-    def turned_back(u, product):
-        """Lower triangle of U^dag Y."""
-        rows = []
-        for m in range(d):
-            row = []
-            for n in range(m + 1):
-                total = _times(_conj(u[0][m]), product[0][n])
-                for k in range(1, d):
-                    total = _add(total, _times(_conj(u[k][m]), product[k][n]))
-                row.append(total if n < m else total[0])
-            rows.append(tuple(row))
-        return tuple(rows)
-
-    def step(h, drive):
-        w = drive[0] * half, drive[1] * half
-        s = w[0] * w[0] + w[1] * w[1]
-        powers = _powers(w, d)
-        g = [[_horner(c, s) for c in row] for row in series]
-        u = _slice(g, powers)
-        product = matrix_times(h, u)
-        along, gx, gy = 0.0, 0.0, 0.0  # dJ/ds, and dJ/dw at fixed s
-        for m in range(d):
-            for n in range(m + 1):
-                p = m - n
-                slope = _slope(series[m][n], s)
-                low, high = _conj(product[m][n]), _conj(product[n][m])
-                if p == 0:
-                    total = low
-                else:
-                    total = _add(_times(low, powers[p]), _times(high, _conj(powers[p])))
-                    if p == 1:
-                        b, a = _times(g[m][n], low), _times(g[m][n], high)
-                    else:
-                        b = _times(g[m][n], _times(low, powers[p - 1]))
-                        a = _times(g[m][n], _times(high, _conj(powers[p - 1])))
-                    gx = gx - p * (a[1] + b[1])  # Re(i (a + b))
-                    gy = gy + p * (a[0] - b[0])  # Im(i a) - Im(i b)
-                along = along - (total[0] * slope[1] + total[1] * slope[0])  # Re(i C g')
-        gx = jnp.sum((gx + 2 * along * w[0]) * half)
-        gy = jnp.sum((gy + 2 * along * w[1]) * half)
-        return turned_back(u, product), (gx, gy)
-
-    _, (gx, gy) = jax.lax.scan(step, start, (x, y), reverse=True)
-    none = jnp.zeros_like
-    return gx, gy, none(duration), none(scale), none(delta)
-
-
-_columns.defvjp(_columns_forward, _columns_backward)
-
-
-@partial(jax.jit, static_argnums=(0, 1))
+@jax.jit
 def propagate_qubit(
-    ladder: Ladder, steps: Steps, drive: Array, duration: float, eps: Array, delta: Array
+    chain: Chain, drive: Array, eps: Array, on: Array | None = None
 ) -> tuple[Array, Array]:
     """What becomes of |0> and |1>, at each grid point; differentiable in the drive.
 
     Args:
-        ladder, steps: static; ``steps`` from ``plan`` for the same slices and bounds.
+        chain: of the drive's slices, within the bounds of its ``plan``.
         drive: [slice, 2] rad/s.
-        duration: s. Length of every slice. Not differentiated.
         eps: [grid] unitless relative amplitude error. Not differentiated.
-        delta: [grid] rad/s detuning. Not differentiated.
+        on: [slice] bool; False: the slice has no duration. None: all have theirs.
     Returns:
         Real and imaginary part, each [grid, level, 2] unitless: final amplitude of each level,
         started in |0> and in |1>, up to one phase common to all.
     Raises:
         RuntimeError: if JAX is not in 64-bit mode.
     Source:
-        Derived in this room.
+        Derived in ``ladder_chain``.
     """
-    require_float64()
-    x, y = drive[:, 0], drive[:, 1]
-    if steps.cuts > 1:
-        x, y = jnp.repeat(x, steps.cuts), jnp.repeat(y, steps.cuts)
-    step = jnp.asarray(duration / steps.cuts, dtype=drive.dtype)
-    grid = eps.shape[0]
-    blocks = -(-grid // WIDEST_BLOCK)
-    width = -(-grid // (blocks * _VECTOR)) * _VECTOR if grid > 1 else 1
-    # the last block is filled up with copies of its last point, dropped again below
-    index = jnp.minimum(jnp.arange(blocks * width), grid - 1).reshape(blocks, width)
-    end = jax.lax.map(
-        lambda errors: _columns(ladder, steps, x, y, step, *errors), (1 + eps[index], delta[index])
-    )
+    slices = _cut(chain, drive, on)
+    index = _blocks(eps.shape[0], WIDEST_BLOCK)
+    end = jax.lax.map(lambda errors: columns(*slices, *errors), _dealt(chain, eps, index))
     re, im = (
         jnp.stack([jnp.stack([pair[part].ravel() for pair in row], -1) for row in end], -2)
         for part in (0, 1)
     )
-    return re[:grid], im[:grid]
+    return re[: eps.shape[0]], im[: eps.shape[0]]
+
+
+def errors_and_jacobian(
+    chain: Chain, drive: Array, eps: Array, rows: Array, on: Array | None = None
+) -> tuple[Array, Array]:
+    """Linear forms of the final amplitudes and their derivative, for Gauss-Newton steps.
+
+    Args:
+        chain, drive, eps, on: as in ``propagate_qubit``.
+        rows: [row, 4 level, grid] unitless: of the real and imaginary part of what becomes of |0>,
+            then of |1>, level by level.
+    Returns:
+        errors [row, grid] unitless and jacobian [slice, 2, row, grid] s/rad.
+    """
+    slices = _cut(chain, drive, on)
+    grid, index = eps.shape[0], _blocks(eps.shape[0], _VECTOR)  # rows make them long enough
+    levels = range(chain.levels)
+
+    def block(errors):
+        *errors, rows = errors
+        forms = rows.reshape(rows.shape[0], chain.levels, 2, 2, -1)
+        cotangents = [[(forms[:, m, c, 0], forms[:, m, c, 1]) for c in (0, 1)] for m in levels]
+        end, jacobian = columns_and_jacobian(*slices, *errors, cotangents)
+        value = sum(
+            forms[:, m, c, part] * end[m][c][part]
+            for m in levels
+            for c in (0, 1)
+            for part in (0, 1)
+        )
+        return value, jacobian
+
+    dealt = *_dealt(chain, eps, index), jnp.moveaxis(jnp.asarray(rows)[:, :, index], 2, 0)
+    value, jacobian = jax.lax.map(block, dealt)
+    value = jnp.moveaxis(value, 0, 1).reshape(rows.shape[0], -1)[:, :grid]
+    by_cut = jacobian.reshape(len(index), len(drive), chain.cuts, 2, *jacobian.shape[3:])
+    jacobian = jnp.moveaxis(jnp.sum(by_cut, axis=2), 0, 3)
+    return value, jacobian.reshape(*jacobian.shape[:3], -1)[..., :grid]
+
+
+def _cut(chain: Chain, drive: Array, on: Array | None) -> tuple[Array, Array, Array]:
+    """Both quadratures in slices short enough for the series, and which of them are there."""
+    require_float64()
+    on = jnp.ones(drive.shape[0], dtype=bool) if on is None else on
+    return tuple(jnp.repeat(each, chain.cuts) for each in (drive[:, 0], drive[:, 1], on))
+
+
+def _dealt(chain: Chain, eps: Array, index: np.ndarray) -> tuple[Array, Array]:
+    """Half turns per drive and series, block by block."""
+    half = (1 + jnp.asarray(eps)) * (chain.duration / 2)
+    return half[index], jnp.moveaxis(jnp.asarray(chain.series)[..., index], -2, 0)
+
+
+def _blocks(grid: int, widest: int) -> np.ndarray:
+    """[block, point]: the grid in blocks of one width, filled up with its last point."""
+    count = -(-grid // widest)
+    width = -(-grid // (count * _VECTOR)) * _VECTOR if grid > 1 else 1
+    return np.minimum(np.arange(count * width), grid - 1).reshape(count, width)
 
 
 def derivative_corrected(

@@ -5,7 +5,8 @@ the physical limit until one succeeds, and the gap between the longest failure a
 success is halved until it is one slice. Every search starts from its neighbors' waveforms too,
 stretched: what a longer pulse has learned, a shorter one need not learn again.
 
-All durations share one compiled program: slices beyond the end have no duration.
+All durations share one compiled program: slices beyond the end have no duration. (Behind a
+line, whose answer outlasts the waveform, they cannot be absent: every duration is compiled anew.)
 """
 
 from __future__ import annotations

@@ -31,11 +31,11 @@ import jax.numpy as jnp
 import numpy as np
 
 from shaper.drive.line import gathered
-from shaper.physics import two_level
 from shaper.search.objective import (
     Problem,
     at_qubit,
     drive_of,
+    errors_and_jacobian,
     log_power_mean,
     measure,
     rotation_errors,
@@ -100,11 +100,7 @@ def _jacobian(problem: Problem, parameters: Array) -> tuple[Array, Array]:
     """
     drive = drive_of(problem, parameters)
     arriving, durations = at_qubit(problem, drive)
-    errors, jacobian = two_level.errors_and_jacobian(
-        arriving, durations, problem.eps, problem.delta, problem.rows, problem.longest_turn
-    )
-    if problem.mix is not None:
-        errors, jacobian = errors @ problem.mix.T, jacobian @ problem.mix.T
+    errors, jacobian = errors_and_jacobian(problem, arriving, durations)
     if problem.kernel is not None:
         jacobian = gathered(problem.kernel, jacobian)
     # a slice's drive depends on its own two parameters only

@@ -1,6 +1,7 @@
 """What is minimized: the infidelity over the tolerance box, as power means of a sum of squares.
 
-The rotation errors ``r = E q`` of a grid point are scaled so that its infidelity is ``|r|^2``. The
+The errors ``r = E q`` of a grid point, linear in its propagator, are scaled so that its infidelity
+is ``|r|^2``; on an anharmonic ladder what leaks is among them. The
 mean over the box is the power mean with ``power = 1``; larger powers lean towards the worst point,
 and in the limit are the maximum. The logarithm is minimized, so that 1e-4 and 1e-12 weigh alike.
 Wishes for the look of the waveform are added to it, each a weight times a sum of squares.
@@ -20,7 +21,8 @@ from shaper.bench import Grid, dense_grid, line_taps, score_grid
 from shaper.drive.bound import quadratures
 from shaper.drive.line import filtered
 from shaper.job import Job
-from shaper.physics import two_level
+from shaper.physics import ladder, leakage, two_level
+from shaper.physics.ladder import Chain, Ladder, make_chain, plan, propagate_qubit
 from shaper.search import shape
 
 Array = jax.Array
@@ -40,7 +42,9 @@ class Problem:
         eps: [grid] unitless.
         delta: [grid] W_max.
         weight: [point] unitless, sums to 1.
-        rows: [row, 4, grid] unitless; the infidelity of a point is ``|rows q|^2``.
+        rows: [row, component, grid] unitless; the infidelity of a point is ``|rows q|^2``. Two
+            levels have the four components of a quaternion, a ladder those of
+            ``ladder.errors_and_jacobian``.
         envelope: [slice] unitless, in [0, 1]; the drive is held below it. None: no envelope.
         kernel: [tap, cell] complex, of the line (``drive.line.Taps``); None: no line.
         mix: [point, grid] unitless. What is minimized are these combinations of the grid's
@@ -49,7 +53,8 @@ class Problem:
         floor: [] infidelity that is good enough: below it only the wishes count. Zero without
             wishes.
         bound: "circle" or "box".
-        longest_turn: rad; no slice (with a line: no cell) turns further.
+        longest_turn: rad; no slice (with a line: no cell) turns further. Of two levels.
+        chain: of slices (with a line: of cells) on the ladder; None: two levels.
     """
 
     durations: Array
@@ -60,6 +65,7 @@ class Problem:
     envelope: Array | None
     kernel: Array | None
     mix: Array | None
+    chain: Chain | None
     wishes: dict[str, tuple[Array, Array]]
     floor: Array
     bound: str = field(metadata={"static": True})
@@ -97,8 +103,9 @@ def make_problem(
     else:
         parts = [_box(job, group, points, per_radian) for group in job.groups]
     grids, mixes = zip(*parts, strict=True)
+    rows_of = _rows if job.anharmonicity is None else _ladder_rows
     rows = [
-        _rows(group, len(grid.eps), 1.0 if scored else group.weight)
+        rows_of(job, group, scored)[:, :, None] * np.ones(len(grid.eps))
         for group, grid in zip(job.groups, grids, strict=True)
     ]
     delta = np.concatenate([grid.delta for grid in grids]) / job.rabi_max
@@ -111,6 +118,11 @@ def make_problem(
     if kernel is not None:  # shorter steps, and a line may overshoot
         step /= kernel.shape[1]
         rate *= max(1.0, float(np.max(np.sum(np.abs(kernel), axis=0))))
+    most_delta = float(np.max(np.abs(delta)))
+    chain = None
+    if job.anharmonicity is not None:
+        levels = Ladder(job.anharmonicity / job.rabi_max, job.levels)
+        chain = make_chain(levels, plan(levels, step, rate, most_delta), step, delta)
     shares = np.array([group.weight if scored else 1.0 for group in job.groups])
     shares /= np.sum(shares)
     return Problem(
@@ -122,10 +134,11 @@ def make_problem(
         envelope=shape.envelope(job, len(durations)),
         kernel=kernel,
         mix=_block_diagonal(mixes) if job.minimize == "first_order" else None,
+        chain=chain,
         wishes={} if scored else shape.wishes(job, len(durations)),
         floor=(job.stop_infidelity or _GOOD_ENOUGH) if shape.wished(job) else 0.0,
         bound=job.bound,
-        longest_turn=_rounded_up(float(np.hypot(rate, np.max(np.abs(delta))) * step)),
+        longest_turn=_rounded_up(float(np.hypot(rate, most_delta) * step)),
     )
 
 
@@ -160,11 +173,28 @@ def _slopes(job: Job, group) -> tuple[Grid, np.ndarray]:
     return grid, mix
 
 
-def _rows(group, points: int, weight: float) -> np.ndarray:
-    """[3, 4, point]: error rows of a qubit; a third row of zeros where an axis is free."""
+def _rows(job: Job, group, scored: bool) -> np.ndarray:
+    """[3, 4]: error rows of a qubit, by its weight; a third row of zeros where an axis is free."""
     rows = np.zeros((3, 4))
     rows[: len(group.target.error_rows)] = group.target.error_rows
-    return np.sqrt(weight * group.target.scale) * rows[:, :, None] * np.ones(points)
+    return np.sqrt((1.0 if scored else group.weight) * group.target.scale) * rows
+
+
+def _ladder_rows(job: Job, group, scored: bool) -> np.ndarray:
+    """[row, 4 level]: real and imaginary parts of the errors in the qubit, then of what leaks."""
+    inside = leakage.qubit_rows(group.target)  # [k, 2, 2]
+    weights = leakage.outside_columns(group.target)  # [column, c]
+    if not scored:
+        weights = np.sqrt(job.leakage_weight) * weights
+    forms = np.zeros((len(inside), job.levels, 2), dtype=complex)
+    forms[:, :2] = inside
+    for level in range(2, job.levels):
+        outside = np.zeros((weights.shape[1], job.levels, 2), dtype=complex)
+        outside[:, level] = weights.T
+        forms = np.concatenate([forms, outside])
+    real = np.stack([forms.real, -forms.imag], axis=-1)  # of (re, im) of an amplitude
+    imaginary = np.stack([forms.imag, forms.real], axis=-1)
+    return np.concatenate([real, imaginary]).reshape(2 * len(forms), -1)
 
 
 def _block_diagonal(blocks) -> np.ndarray:
@@ -200,9 +230,25 @@ def at_qubit(problem: Problem, drive: Array) -> tuple[Array, Array]:
 def rotation_errors(problem: Problem, parameters: Array) -> Array:
     """[row, point] unitless: what should vanish; parameters [slice, 2] rad."""
     drive, durations = at_qubit(problem, drive_of(problem, parameters))
-    q = two_level.propagate(drive, durations, problem.eps, problem.delta, problem.longest_turn)
-    errors = sum(problem.rows[:, i] * q[i] for i in range(4))
+    eps, delta = problem.eps, problem.delta
+    if problem.chain is None:
+        q = two_level.propagate(drive, durations, eps, delta, problem.longest_turn)
+    else:
+        ends = propagate_qubit(problem.chain, drive, eps, durations > 0)
+        q = jnp.stack(ends, axis=-1).reshape(len(eps), -1).T
+    errors = sum(problem.rows[:, i] * q[i] for i in range(problem.rows.shape[1]))
     return errors if problem.mix is None else errors @ problem.mix.T
+
+
+def errors_and_jacobian(problem: Problem, drive: Array, durations: Array) -> tuple[Array, Array]:
+    """Errors [row, point] and their derivative [cell, 2, row, point] by the drive at the qubit."""
+    eps, delta, rows = problem.eps, problem.delta, problem.rows
+    if problem.chain is None:
+        turn = problem.longest_turn
+        found = two_level.errors_and_jacobian(drive, durations, eps, delta, rows, turn)
+    else:
+        found = ladder.errors_and_jacobian(problem.chain, drive, eps, rows, durations > 0)
+    return found if problem.mix is None else tuple(f @ problem.mix.T for f in found)
 
 
 def infidelities(problem: Problem, parameters: Array) -> Array:

@@ -33,6 +33,11 @@ class Stage:
 EXPLORE = Stage("exploring", (3, 5), 0.7, None, (1.0,), None)
 REFINE = Stage("refining", (11, 15), 2.5, 8, (1.0, 4.0, 16.0), 40)
 FINISH = Stage("finishing", (11, 15), 2.5, 3, (64.0, 256.0), 40)  # the grid again: one program
+# on a ladder: one grid for all, since its one program takes seconds to compile
+ON_A_LADDER = tuple(
+    replace(stage, points=(7, 9), per_radian=1.8, kept=kept)
+    for stage, kept in ((EXPLORE, None), (REFINE, 4), (FINISH, 2))
+)
 LARGEST_JACOBIAN = 3e7  # doubles, all starts together; beyond it quasi-Newton steps are taken
 
 
@@ -53,8 +58,10 @@ def worst_counts(job: Job) -> bool:
 
 def stages(job: Job) -> tuple[Stage, ...]:
     """The legs of this job's search."""
+    two_levels = job.anharmonicity is None
+    explore, refine, finish = (EXPLORE, REFINE, FINISH) if two_levels else ON_A_LADDER
     if not job.has_tolerance or job.minimize == "first_order":
-        return (EXPLORE,)
+        return (explore,)
     if job.minimize == "mean":
-        return (EXPLORE, replace(REFINE, powers=(1.0,)))
-    return (EXPLORE, REFINE, FINISH)
+        return (explore, replace(refine, powers=(1.0,)))
+    return (explore, refine, finish)

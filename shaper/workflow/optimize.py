@@ -14,7 +14,6 @@ from shaper.job import Job, parse_job
 from shaper.physics.decay import coherence_limit
 from shaper.pulse import Score, Table, Waveform
 from shaper.search import descent
-from shaper.search.anharmonic import search_on_levels
 from shaper.search.checkpoint import Checkpoint
 from shaper.search.duration import Tried, search_best, search_shortest
 from shaper.units import NS
@@ -51,8 +50,6 @@ def optimize(
         curve = _curve(tried)
         if stop is not None and stop():  # it may have converged, but not on the duration
             found = replace(found, status="interrupted")
-    elif job.anharmonicity is not None:
-        found = search_on_levels(within, progress, stop)
     else:
         found = descent.search(within, progress, stop, checkpoint=checkpoint)
     samples = np.full(job.slices, job.samples_per_slice)
