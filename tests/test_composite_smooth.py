@@ -56,13 +56,14 @@ def test_the_comparison_sees_the_levels():
     here = job(gate="x")
     pulses = library_pulses(here)
     found = {name: on_levels(*pulses[name].pulse.played, here) for name in ("cosine", *LADDER)}
-    for name, (error, lost) in found.items():
+    for name, (error, lost, returned) in found.items():
         drive, durations = pulses[name].pulse.played
         total = np.eye(3, dtype=complex)
         for rate, duration in zip(drive, durations, strict=True):
             total = three_levels(rate[None], duration, here.anharmonicity) @ total
         block = total[:2, :2]
         assert lost == pytest.approx(1 - np.trace(block.conj().T @ block).real / 2, abs=1e-13)
+        assert returned == pytest.approx(np.sum(np.abs(total[:2, 2]) ** 2), abs=1e-13)
         assert error >= 2 / 3 * lost, name
         at = level_infidelity(
             drive, durations, here, np.array([0.0, 0.03]), here.detuning + np.array([0.0, 1e6])
