@@ -2,7 +2,7 @@
 
 python scripts/acceptance.py [CHECK ...] [--seeds N] [--json]
 
-Checks: random_gates, shortest, robust, first_order, wait, memory. Infidelities are not the
+Checks: random_gates, shortest, robust, first_order, ladder, wait, memory. Infidelities are not the
 project's own: they are recomputed from the written file alone, by bare h5py and textbook matrices.
 Exit code 1 if a figure falls short.
 """
@@ -22,6 +22,7 @@ from pathlib import Path
 
 import h5py
 import numpy as np
+from scipy.linalg import expm
 
 ROOT = Path(__file__).resolve().parents[1]
 sys.path.insert(0, str(ROOT / "tests"))
@@ -39,6 +40,8 @@ FIRST_ORDER = {
     "x180": {"detuning": 2.3358318, "amplitude": 2.5819642, "both": 3.6145857},
     "hadamard": {"detuning": 2.6939065, "amplitude": 2.735185, "both": 3.6781092},
 }
+LADDER = {"x180": 10.0, "hadamard": 12.0, "z90": 14.0}  # ns within which 1e-9 is asked for
+ANHARMONICITY = -210e6 * 2 * math.pi  # rad/s
 FIRST_ORDER_SLOPE = 1e-4  # rotation error per relative error: 1e-10 of infidelity at 10 %
 RUNS = 5  # of each timing; medians are quoted
 
@@ -299,7 +302,51 @@ def memory(folder: Path, seeds: int):
     yield Figure("memory", what, growth, 0.1, time.perf_counter() - began)
 
 
-CHECKS = {c.__name__: c for c in (random_gates, shortest, robust, first_order, wait, memory)}
+def ladder(folder: Path, seeds: int):
+    """Shortest pulses on three levels, -210 MHz, at most 60 MHz, slices of 0.25 ns.
+
+    Without errors below 1e-9, and below 1e-5 within +-1 % and +-1 MHz; leakage counted.
+    """
+    for gate, most_ns in LADDER.items():
+        target = 'gate = "x"\nangle_deg = 180.0' if gate == "x180" else f'gate = "{gate}"'
+        target = 'gate = "z"\nangle_deg = 90.0' if gate == "z90" else target
+        for box, goal, wanted in (((0.0, 0.0), 1e-9, most_ns), ((0.01, 1.0), 1e-5, None)):
+            text = (
+                "[qubit]\nanharmonicity_MHz = -210.0\n[drive]\nrabi_max_MHz = 60.0\n"
+                f"sample_rate_MSps = 4000.0\ndac_bits = 16\n[target]\n{target}\n[tolerance]\n"
+                f"amplitude = {box[0]}\ndetuning_MHz = {box[1]}\n[pulse]\n"
+                'duration_ns = "shortest"\nslice_ns = 0.25\n[search]\n'
+                f"stop_infidelity = {goal}\n"
+            )
+            _, file, seconds = optimized(text, folder)
+            drive, durations, wish, _ = from_file(file)
+            lost = max(
+                _three_level_infidelity(
+                    drive, durations, wish, box[0] * a, box[1] * d * 2e6 * np.pi
+                )
+                for a in (-1, 0, 1)
+                for d in (-1, 0, 1)
+            )
+            length = float(np.sum(durations)) * 1e9 if lost <= goal else math.inf
+            name = f"{gate} on three levels below {goal:.0e} (found {lost:.1e}): ns"
+            yield Figure("ladder", name, length, wanted, seconds)
+
+
+def _three_level_infidelity(drive, durations, wanted, eps, delta) -> float:
+    """By one scipy.linalg.expm a segment; Pedersen, Moller and Molmer 2007."""
+    lower, n = np.diag([1, math.sqrt(2)], 1), np.arange(3)
+    still = np.diag(delta * (0.5 - n) + ANHARMONICITY * n * (n - 1) / 2)
+    total = np.eye(3, dtype=complex)
+    for (wx, wy), duration in zip(drive, durations, strict=True):
+        half = (1 + eps) / 2 * (wx - 1j * wy) * lower
+        total = expm(-1j * duration * (still + half + half.conj().T)) @ total
+    m = wanted.conj().T @ total[:2, :2]
+    return float(1 - (np.trace(m @ m.conj().T).real + abs(np.trace(m)) ** 2) / 6)
+
+
+CHECKS = {
+    c.__name__: c for c in (random_gates, shortest, robust, first_order, ladder, wait, memory)
+}
 
 
 def main() -> int:

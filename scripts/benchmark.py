@@ -1,7 +1,7 @@
 """How fast the engine and the search are, and how good, against the ways without this project.
 
-python scripts/benchmark.py [--engine] [--wait] [--search] [--reach] [--growth] [--cores] [--memory]
-                            [--rounds N] [--json] [--figure FILE] [--record | --check]
+python scripts/benchmark.py [--engine] [--ladder] [--wait] [--search] [--reach] [--growth] [--cores]
+                            [--memory] [--rounds N] [--json] [--figure FILE] [--record | --check]
 
 All parts by default; with ``--engine --json`` just the engine's time for a slice and grid point.
 The machine may be busy: contenders take turns within one run, and what counts are ratios of
@@ -25,7 +25,7 @@ from pathlib import Path
 
 HERE = Path(__file__).resolve().parent
 RECORD = HERE / "benchmark-record.json"
-PARTS = ("engine", "wait", "search", "reach", "growth", "cores", "memory")
+PARTS = ("engine", "ladder", "wait", "search", "reach", "growth", "cores", "memory")
 WORSE = 1.5
 STARTS, ITERATIONS, SLICES = 16, 300, 80
 RIVAL_STARTS = 64  # what the hand-written search may spend on reaching the project's quality
@@ -216,6 +216,7 @@ MEASURE = {
     "search": measure_search,
     "reach": measure_reach,
     "growth": lambda rounds: part("growth"),
+    "ladder": lambda rounds: part("ladder"),
     "cores": measure_cores,
     "memory": measure_memory,
 }
@@ -227,6 +228,8 @@ def comparable(result: dict) -> dict[str, float]:
     for size, ways in result.get("engine", {}).items():
         others = ways.keys() - {"engine", "expm"}  # expm is four decades away: nothing to watch
         kept |= {f"engine/{size}/{way}": ways[way]["ratio"] for way in sorted(others)}
+    for size, v in result.get("ladder", {}).items():
+        kept[f"ladder/{size}/three levels over two"] = v["ratio"]
     for name in ("wait", "search"):
         for row, values in result.get(name, {}).items():
             if row.startswith(("optimize", "--help")):
@@ -260,6 +263,11 @@ def text(result: dict) -> str:
             f"   first call {v['first_s']:6.2f} s   gradient off {v['gradient_off']:.0e}"
             for way, v in ways.items()
         ]
+    for size, v in result.get("ladder", {}).items():
+        lines.append(
+            f"\nthree levels, {size}: {v['three_levels_ns']:.4g} ns per slice and point, "
+            f"{v['ratio']:.1f} times two levels"
+        )
     for name, title in (("wait", "whole process, over importing JAX"), ("search", "whole search")):
         if name in result:
             lines.append(f"\n{title}")

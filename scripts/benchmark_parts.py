@@ -124,6 +124,41 @@ def engine_against(sizes=((16, 1), *SIZES), budget: float = 0.3, rounds: int = R
     return {"engine": found}
 
 
+def ladder(rounds: int = 7, budget: float = 0.05) -> dict:
+    """Cost plus gradient on three levels against two: ns per slice and point, and their ratio."""
+    import jax
+    import jax.numpy as jnp
+
+    from shaper.physics.ladder import Ladder, make_chain, plan, propagate_qubit
+
+    found = {}
+    for slices, grid in SIZES:
+        drive, delta, eps, weight = problem(slices, grid)
+        two = jax.jit(engine(drive, delta, eps, weight))
+        levels = Ladder(-0.33)  # rad a slice, as -210 MHz in 0.25 ns
+        most = float(np.max(np.abs(delta)))
+        steps = plan(levels, 1.0, 1.1 * float(np.max(np.hypot(*drive.T))), most)
+        chain = jax.tree.map(jnp.asarray, make_chain(levels, steps, 1.0, delta))
+
+        def cost(drive, chain=chain, eps=eps, weight=weight):
+            re, im = propagate_qubit(chain, drive, eps)
+            return 1 - jnp.sum(weight[:, None, None] * (re**2 + im**2)[:, :2])
+
+        three = jax.jit(jax.value_and_grad(cost))
+        calls = [lambda f=f, d=drive: jax.block_until_ready(f(d)) for f in (two, three)]
+        for call in calls:
+            call()
+        turns = [
+            [statistics.median(seconds(call, budget)) for call in calls] for _ in range(rounds)
+        ]
+        found[f"{slices}x{grid}"] = {
+            "two_levels_ns": 1e9 * statistics.median(t[0] for t in turns) / slices / grid,
+            "three_levels_ns": 1e9 * statistics.median(t[1] for t in turns) / slices / grid,
+            "ratio": statistics.median(t[1] / t[0] for t in turns),
+        }
+    return {"ladder": found}
+
+
 def growth(budget: float = 0.5) -> dict:
     """ns per slice, grid point and start, one of the three growing at a time."""
     import jax
@@ -217,6 +252,7 @@ PARTS = {
     "engine_alone": engine_alone,
     "engine_against": engine_against,
     "growth": growth,
+    "ladder": ladder,
     "cores": lambda count, grid: cores(int(count), int(grid)),
     "search_on_cores": search_on_cores,
     "memory": lambda slices, way="engine": memory(int(slices), way=way),

@@ -25,7 +25,8 @@ Array = jax.Array
 MOST_LEVELS = 5
 LARGEST_NORM = 1.5  # of H dt; a slice that exceeds it is cut into equal parts
 WIDEST_BLOCK = 32  # grid points carried at once: their series must stay in the fastest cache
-_VECTOR = 8  # doubles in the longest vector; blocks are multiples: rests go one by one
+_VECTOR = 8  # doubles in the longest vector; blocks are multiples: shorter ones would be unrolled
+# whole, into code whose compilation takes gigabytes
 _TRUNCATION = 2e-16  # of a slice's elements: no more than their own round-off
 
 
@@ -198,11 +199,11 @@ def errors_and_jacobian(
     return value, jacobian.reshape(*jacobian.shape[:3], -1)[..., :grid]
 
 
-def _cut(chain: Chain, drive: Array, on: Array | None) -> tuple[Array, Array, Array]:
+def _cut(chain: Chain, drive: Array, on: Array | None) -> tuple[Array, Array, Array | None]:
     """Both quadratures in slices short enough for the series, and which of them are there."""
     require_float64()
-    on = jnp.ones(drive.shape[0], dtype=bool) if on is None else on
-    return tuple(jnp.repeat(each, chain.cuts) for each in (drive[:, 0], drive[:, 1], on))
+    x, y = jnp.repeat(drive[:, 0], chain.cuts), jnp.repeat(drive[:, 1], chain.cuts)
+    return x, y, None if on is None else jnp.repeat(on, chain.cuts)
 
 
 def _dealt(chain: Chain, eps: Array, index: np.ndarray) -> tuple[Array, Array]:
@@ -214,7 +215,7 @@ def _dealt(chain: Chain, eps: Array, index: np.ndarray) -> tuple[Array, Array]:
 def _blocks(grid: int, widest: int) -> np.ndarray:
     """[block, point]: the grid in blocks of one width, filled up with its last point."""
     count = -(-grid // widest)
-    width = -(-grid // (count * _VECTOR)) * _VECTOR if grid > 1 else 1
+    width = -(-grid // (count * _VECTOR)) * _VECTOR
     return np.minimum(np.arange(count * width), grid - 1).reshape(count, width)
 
 

@@ -113,18 +113,18 @@ def _slice(g: list, powers: list) -> list:
     return u
 
 
-def _kept(on: Array, new, old):
+def _kept(on: Array | None, new, old):
     """The new values where a slice is there, else the old ones."""
-    return jax.tree.map(lambda a, b: jnp.where(on, a, b), new, old)
+    return new if on is None else jax.tree.map(lambda a, b: jnp.where(on, a, b), new, old)
 
 
 @jax.custom_vjp
-def columns(x: Array, y: Array, on: Array, half: Array, series: Array) -> tuple:
+def columns(x: Array, y: Array, on: Array | None, half: Array, series: Array) -> tuple:
     """What becomes of |0> and |1>, differentiable in x and y.
 
     Args:
         x, y: [slice] rad/s.
-        on: [slice] bool. False: the slice has no duration.
+        on: [slice] bool. False: the slice has no duration. None: all have theirs.
         half: [grid] s. Half a slice times 1 + eps.
         series: [element, term, 2, grid], of ``coefficients``.
     Returns:
@@ -248,7 +248,7 @@ def _back(kept: tuple, cotangents: tuple, gather):
 
     def step(h, drive):
         before, gx, gy = _step_back(elements, h, (drive[0] * half, drive[1] * half))
-        there = drive[2] * half
+        there = half if on is None else drive[2] * half
         return _kept(drive[2], before, h), gather(gx * there, gy * there)
 
     return jax.lax.scan(step, _hermitian(end, cotangents), (x, y, on), reverse=True)[1]
@@ -263,7 +263,7 @@ columns.defvjp(_columns_forward, _columns_backward)
 
 
 def columns_and_jacobian(
-    x: Array, y: Array, on: Array, half: Array, series: Array, cotangents: tuple
+    x: Array, y: Array, on: Array | None, half: Array, series: Array, cotangents: tuple
 ) -> tuple:
     """The columns, and the slopes of many functions of them, point by point.
 

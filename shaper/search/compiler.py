@@ -28,7 +28,8 @@ def prepare() -> None:
     import jax
 
     jax.config.update("jax_enable_x64", True)
-    os.environ.setdefault("XLA_FLAGS", " ".join(_flags()))
+    if flags := _flags():
+        os.environ.setdefault("XLA_FLAGS", " ".join(flags))
     folder = cache_folder()
     if folder is None:
         return

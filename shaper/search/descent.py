@@ -20,6 +20,7 @@ from shaper.search.batches import advance
 from shaper.search.checkpoint import Checkpoint
 from shaper.search.compiler import prepare
 from shaper.search.objective import (
+    Problem,
     all_infidelities,
     all_wish_costs,
     drive_of,
@@ -138,7 +139,10 @@ class _Run:
         self.best_rank = np.inf  # score and wishes together
         self.legs: list[Leg] = []
         self.interrupted = self.reached = False
-        self._score_problem = make_problem(job, slices=parameters.shape[1])
+        self._score_problem = make_problem(job, slices=parameters.shape[1], weighted=False)
+        self._rank_problem = self._score_problem
+        if job.leakage_weight != 1 or any(group.weight != 1 for group in job.groups):
+            self._rank_problem = make_problem(job, slices=parameters.shape[1])
         self._enter(0, np.arange(len(names)))
 
     @property
@@ -229,20 +233,18 @@ class _Run:
         """Score these starts as they stand, and keep the best ever seen.
 
         Returns:
-            [start] what to rank them by: the mean over the score's grid while the mean is being
-            lowered, which tells better how far a start will come, else the score itself.
+            [start] what to rank them by, weights included: the mean over the score's grid while
+            the mean is being lowered, which tells better how far a start will come, else what is
+            scored.
         """
-        padded = np.resize(starts, -(-len(starts) // MEASURED) * MEASURED)
-        found = np.concatenate(
-            [  # batches of one size: one compiled program
-                np.asarray(all_infidelities(self._score_problem, self.parameters[batch]))
-                for batch in padded.reshape(-1, MEASURED)
-            ]
-        )[: len(starts)]
-        mean = found @ np.asarray(self._score_problem.weight)
-        score = found.max(axis=1) if worst_counts(self.job) else mean
+        found = self._on_the_score_grid(self._score_problem, starts)
+        counted = found
+        if self._rank_problem is not self._score_problem:
+            counted = self._on_the_score_grid(self._rank_problem, starts)
+        score, _ = self._judged(self._score_problem, found)
+        ranked, mean = self._judged(self._rank_problem, counted)
         with np.errstate(divide="ignore"):  # a perfect pulse
-            rank = np.log(score + self.problem.floor)
+            rank = np.log(ranked + self.problem.floor)
         if self.problem.wishes:
             rank += sum(
                 map(np.asarray, all_wish_costs(self.problem, self.parameters[starts]).values())
@@ -252,7 +254,21 @@ class _Run:
             start = int(starts[leader])
             self.best_rank, self.best_score = float(rank[leader]), float(score[leader])
             self.best_start, self.best = start, self.parameters[start].copy()
-        return mean if power == 1 else score
+        return mean if power == 1 else ranked
+
+    def _on_the_score_grid(self, problem: Problem, starts: np.ndarray) -> np.ndarray:
+        """[start, point] infidelity of these starts as they stand."""
+        padded = np.resize(starts, -(-len(starts) // MEASURED) * MEASURED)
+        found = [  # batches of one size: one compiled program
+            np.asarray(all_infidelities(problem, self.parameters[batch]))
+            for batch in padded.reshape(-1, MEASURED)
+        ]
+        return np.concatenate(found)[: len(starts)]
+
+    def _judged(self, problem: Problem, found: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """[start] what counts, the worst point or the mean; and the mean."""
+        mean = found @ np.asarray(problem.weight)
+        return (found.max(axis=1) if worst_counts(self.job) else mean), mean
 
     def report(self) -> tuple[str, int, int, float]:
         """For the progress line: stage, step, of how many, best infidelity so far."""

@@ -55,6 +55,7 @@ class Problem:
         bound: "circle" or "box".
         longest_turn: rad; no slice (with a line: no cell) turns further. Of two levels.
         chain: of slices (with a line: of cells) on the ladder; None: two levels.
+        on: [slice] bool, which slices are there, for the ladder; None: all.
     """
 
     durations: Array
@@ -66,6 +67,7 @@ class Problem:
     kernel: Array | None
     mix: Array | None
     chain: Chain | None
+    on: Array | None
     wishes: dict[str, tuple[Array, Array]]
     floor: Array
     bound: str = field(metadata={"static": True})
@@ -88,12 +90,15 @@ def make_problem(
     points: tuple[int, int] | None = None,
     slices: int | None = None,
     per_radian: float = 0.0,
+    *,
+    weighted: bool = True,
 ) -> Problem:
     """The job on a grid of errors, all its qubits together.
 
     Args:
         points: fewest of the Gauss-Lobatto grid along amplitude and detuning; None: the grid on
-            which pulses are scored, without the qubits' weights and without wishes.
+            which pulses are scored, without wishes.
+        weighted: whether the errors carry the qubits' weights and that of leakage.
         slices: length of the arrays, at least the job's own; the rest has no duration.
         per_radian: points per rad of an error's reach, where that is more (``bench.points_for``).
     """
@@ -105,7 +110,7 @@ def make_problem(
     grids, mixes = zip(*parts, strict=True)
     rows_of = _rows if job.anharmonicity is None else _ladder_rows
     rows = [
-        rows_of(job, group, scored)[:, :, None] * np.ones(len(grid.eps))
+        rows_of(job, group, weighted)[:, :, None] * np.ones(len(grid.eps))
         for group, grid in zip(job.groups, grids, strict=True)
     ]
     delta = np.concatenate([grid.delta for grid in grids]) / job.rabi_max
@@ -123,7 +128,7 @@ def make_problem(
     if job.anharmonicity is not None:
         levels = Ladder(job.anharmonicity / job.rabi_max, job.levels)
         chain = make_chain(levels, plan(levels, step, rate, most_delta), step, delta)
-    shares = np.array([group.weight if scored else 1.0 for group in job.groups])
+    shares = np.array([1.0 if weighted else group.weight for group in job.groups])
     shares /= np.sum(shares)
     return Problem(
         durations=durations,
@@ -135,6 +140,7 @@ def make_problem(
         kernel=kernel,
         mix=_block_diagonal(mixes) if job.minimize == "first_order" else None,
         chain=chain,
+        on=None if len(durations) == job.slices else durations > 0,
         wishes={} if scored else shape.wishes(job, len(durations)),
         floor=(job.stop_infidelity or _GOOD_ENOUGH) if shape.wished(job) else 0.0,
         bound=job.bound,
@@ -173,18 +179,18 @@ def _slopes(job: Job, group) -> tuple[Grid, np.ndarray]:
     return grid, mix
 
 
-def _rows(job: Job, group, scored: bool) -> np.ndarray:
+def _rows(job: Job, group, weighted: bool) -> np.ndarray:
     """[3, 4]: error rows of a qubit, by its weight; a third row of zeros where an axis is free."""
     rows = np.zeros((3, 4))
     rows[: len(group.target.error_rows)] = group.target.error_rows
-    return np.sqrt((1.0 if scored else group.weight) * group.target.scale) * rows
+    return np.sqrt((group.weight if weighted else 1.0) * group.target.scale) * rows
 
 
-def _ladder_rows(job: Job, group, scored: bool) -> np.ndarray:
+def _ladder_rows(job: Job, group, weighted: bool) -> np.ndarray:
     """[row, 4 level]: real and imaginary parts of the errors in the qubit, then of what leaks."""
     inside = leakage.qubit_rows(group.target)  # [k, 2, 2]
     weights = leakage.outside_columns(group.target)  # [column, c]
-    if not scored:
+    if weighted:
         weights = np.sqrt(job.leakage_weight) * weights
     forms = np.zeros((len(inside), job.levels, 2), dtype=complex)
     forms[:, :2] = inside
@@ -234,7 +240,7 @@ def rotation_errors(problem: Problem, parameters: Array) -> Array:
     if problem.chain is None:
         q = two_level.propagate(drive, durations, eps, delta, problem.longest_turn)
     else:
-        ends = propagate_qubit(problem.chain, drive, eps, durations > 0)
+        ends = propagate_qubit(problem.chain, drive, eps, problem.on)
         q = jnp.stack(ends, axis=-1).reshape(len(eps), -1).T
     errors = sum(problem.rows[:, i] * q[i] for i in range(problem.rows.shape[1]))
     return errors if problem.mix is None else errors @ problem.mix.T
@@ -247,7 +253,7 @@ def errors_and_jacobian(problem: Problem, drive: Array, durations: Array) -> tup
         turn = problem.longest_turn
         found = two_level.errors_and_jacobian(drive, durations, eps, delta, rows, turn)
     else:
-        found = ladder.errors_and_jacobian(problem.chain, drive, eps, rows, durations > 0)
+        found = ladder.errors_and_jacobian(problem.chain, drive, eps, rows, problem.on)
     return found if problem.mix is None else tuple(f @ problem.mix.T for f in found)
 
 
