@@ -222,6 +222,26 @@ def filtered(kernel: np.ndarray, drive: np.ndarray) -> np.ndarray:
     return xp.stack([xp.reshape(x, (-1,)), xp.reshape(y, (-1,))], axis=-1)
 
 
+def fourth_order(kernel: np.ndarray) -> np.ndarray:
+    """The kernel with which a chain of constant cells is right to fourth order in their length.
+
+    Means alone leave an error of second order: within a cell the drive still turns. Two cells with
+    means ``m -+ d`` stand for the straight line through them if they are taken as ``m -+ 4/3 d``
+    (commutator-free Magnus expansion). For propagation only: they are no means any more.
+
+    Args:
+        kernel: [tap, cell], of ``Taps``; left as it is if its cells have no pairs.
+    Source:
+        S. Blanes and P. C. Moan, Appl. Numer. Math. 56, 1519 (2006) (from memory); the two halves
+        in terms of means: derived here.
+    """
+    if kernel.shape[1] % 2:
+        return kernel
+    pairs = kernel.reshape(len(kernel), -1, 2)
+    middle = pairs.mean(axis=2, keepdims=True)
+    return (middle + 4 / 3 * (pairs - middle)).reshape(kernel.shape)
+
+
 def gathered(kernel: np.ndarray, slope: np.ndarray) -> np.ndarray:
     """The transpose of ``filtered``: slopes by cells to slopes by slices, many at once.
 

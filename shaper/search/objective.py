@@ -19,7 +19,7 @@ import numpy as np
 
 from shaper.bench import Grid, dense_grid, line_taps, score_grid
 from shaper.drive.bound import quadratures
-from shaper.drive.line import filtered
+from shaper.drive.line import filtered, fourth_order
 from shaper.job import Job
 from shaper.physics import ladder, leakage, two_level
 from shaper.physics.ladder import Chain, Ladder, make_chain, plan, propagate_qubit
@@ -119,7 +119,7 @@ def make_problem(
     rate = (1 + np.max(np.abs(eps))) * (1.0 if job.bound == "circle" else np.sqrt(2))
     durations = np.zeros(slices or job.slices)
     durations[: job.slices] = step
-    kernel = None if (taps := line_taps(job)) is None else taps.kernel
+    kernel = None if (taps := line_taps(job)) is None else fourth_order(taps.kernel)
     if kernel is not None:  # shorter steps, and a line may overshoot
         step /= kernel.shape[1]
         rate *= max(1.0, float(np.max(np.sum(np.abs(kernel), axis=0))))
