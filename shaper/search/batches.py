@@ -1,7 +1,7 @@
-"""The starts dealt out to the processor's cores: a batch and a thread for each.
+"""The starts dealt out to the processor's cores: small batches, and a thread for each core.
 
 The starts know nothing of each other, and compiled programs run without Python's lock. So threads
-of one process do, and share what is compiled; smaller batches also sit better in the caches.
+of one process do, and share what is compiled; small batches also sit better in the caches.
 """
 
 from __future__ import annotations
