@@ -27,7 +27,6 @@ RELATIVE_WORST = 0.03  # the same for a maximum, which a coarse grid may miss by
 GRID = 2 * CHANGE_WHEN_DOUBLED  # infidelity; what two grids behind a line may differ by
 _RESOLUTION = independent.RESOLUTION
 _HERTZ_SQUARED = (2 * np.pi) ** 2  # (rad/s)^2
-_FEWEST_CELLS = 32  # per sample behind a line, as for the score
 _CELLS_WITHOUT_LINE = 16  # per sample, where skew or an intermediate frequency turn within one
 _WORST_POINTS, _WORST_DENSITY = 13, 5.0  # per axis at least, and per rad of reach; evenly spaced
 _MEAN_POINTS, _MEAN_DENSITY = 9, 2.0  # the same, Gauss-Legendre
@@ -143,7 +142,7 @@ def _cells(pulse: Pulse, effects: Effects) -> int:
     if path.line is None:
         return max(_CELLS_WITHOUT_LINE, turning)
     floats = np.repeat(pulse.drive, pulse.samples, axis=0)
-    return max(_FEWEST_CELLS, turning, cells_needed(path.line, floats, 1 / pulse.sample_rate))
+    return max(turning, cells_needed(path.line, floats, 1 / pulse.sample_rate))
 
 
 def check_claims(
