@@ -26,7 +26,7 @@ from shaper.target import Target, infidelity
 
 DEG = math.pi / 180
 EXACT = 1e-14**2  # infidelity of a rotation that is its target to 1e-14
-EXACT_WHOLE = 1e-13**2  # the same for up to twenty arcs whose phases were solved for
+EXACT_WHOLE = 1e-12**2  # up to twenty arcs, each a root found to 1e-13, one after the other
 TEN_DIGITS = 1e-10
 ROUND_OFF = 5e-15  # of the rotation error, after twenty arcs
 TRACE_ROUND_OFF = 3e-14  # of the trace formula of the second implementation, after twenty arcs
