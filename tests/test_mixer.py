@@ -109,12 +109,12 @@ def test_intermediate_frequency_keeps_gate_and_phase(rng):
     target = Target(propagate(drive, durations, 0.0, 0.0))
     for frequency in (120e6, -80e6):
         played = mixer.upconverted(drive, 1e9, frequency, first=1234, phase=0.3)
-        held = np.repeat(played, 16, axis=0)
-        back = mixer.at_carrier(held, 16e9, frequency, first=16 * 1234, phase=0.3)
+        perfect = (mixer.Calibration(), 1e9, 16, frequency)
+        back = mixer.arrived_at_carrier(played, *perfect, first=1234, phase=0.3)
         arrived = propagate(back, np.full(len(back), NS / 16), 0.0, 0.0)
         assert infidelity(arrived, target) < 3e-4  # left: 43 degrees of turn within a sample
         # a pulse that forgets the phase reference makes another gate
-        other = mixer.at_carrier(held, 16e9, frequency, first=16 * 1235, phase=0.3)
+        other = mixer.arrived_at_carrier(played, *perfect, first=1235, phase=0.3)
         assert infidelity(propagate(other, np.full(800, NS / 16), 0.0, 0.0), target) > 5e-3
     wanted = np.ones((1000, 2)) * [1.0, 0.0]
     spectrum = np.fft.fft(mixer.upconverted(wanted, 1e9, 120e6) @ [1, 1j])

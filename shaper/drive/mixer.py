@@ -227,26 +227,3 @@ def _turned_means(values, late, outside, turn, cells) -> np.ndarray:
     piece = np.searchsorted(edges, at, side="right") - 1
     total = before[piece] + values[piece] * area(edges[piece], at)
     return np.diff(total) * cells
-
-
-def at_carrier(
-    drive: np.ndarray,
-    rate: float,
-    frequency: float,
-    *,
-    first: int = 0,
-    phase: float = 0.0,
-) -> np.ndarray:
-    """What stands on an intermediate frequency, seen from the carrier, as exact cell means.
-
-    Args:
-        drive: [cell, 2] rad/s, constant over each cell.
-        rate: cells per second.
-        first: cells from the phase reference to the first one.
-    Returns:
-        [cell, 2] rad/s.
-    """
-    time = (first + np.arange(len(drive)) + 0.5) / rate
-    turn = np.exp(-1j * (2 * np.pi * frequency * time + phase)) * np.sinc(frequency / rate)
-    z = np.asarray(drive) @ np.array([1, 1j]) * turn
-    return np.stack([z.real, z.imag], axis=-1)

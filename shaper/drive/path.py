@@ -10,8 +10,7 @@ from shaper.drive import mixer
 from shaper.drive.line import Line, taps, whole
 
 _FEWEST_CELLS = 8  # per sample
-# which the drive moves in: worst cases of 5e-5 are then right to 0.2 %, with 8 cells to 3 %
-_FEWEST_BEHIND_A_LINE = 32
+_FEWEST_BEHIND_A_LINE = 32  # worst cases of 5e-5 are then right to 0.2 %, with 8 cells to 3 %
 _LARGEST_TURN = 0.04  # rad a cell at the intermediate frequency: its own sliver is then 1/250
 
 

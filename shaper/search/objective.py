@@ -98,9 +98,9 @@ def make_problem(
     Args:
         points: fewest of the Gauss-Lobatto grid along amplitude and detuning; None: the grid on
             which pulses are scored, without wishes.
-        weighted: whether the errors carry the qubits' weights and that of leakage.
         slices: length of the arrays, at least the job's own; the rest has no duration.
         per_radian: points per rad of an error's reach, where that is more (``bench.points_for``).
+        weighted: whether the errors carry the qubits' weights and that of leakage.
     """
     scored = points is None
     if job.minimize == "first_order":

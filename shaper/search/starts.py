@@ -135,5 +135,5 @@ def _gaussians(job: Job) -> np.ndarray:
         if n > 0
     ]
     drive = np.concatenate(drive) / job.rabi_max
-    over = np.max(np.linalg.norm(drive, axis=1))  # held below the bound, its shape kept
-    return parameters(drive * min(1.0, _DRAW_IN / over), job.bound)
+    most = max(np.max(np.linalg.norm(drive, axis=1)), _DRAW_IN)
+    return parameters(drive * _DRAW_IN / most, job.bound)  # its shape kept
